@@ -1,0 +1,1 @@
+"""Hardware behind Evenarm: contracts, registry and one file for each device family."""
