@@ -260,7 +260,13 @@ class Setting:
 
     ``unit`` is an SI unit as text for a quantity (the value then arrives converted to it, as a
     float), ``""`` for a bare number, or one of ``"text"``, ``"bool"``, ``"int"``. ``low`` and
-    ``high`` are inclusive and in that unit. ``choices`` narrows a text.
+    ``high`` are inclusive and in that unit. ``choices`` narrows a text. ``"signal"`` as unit is the
+    detector's own.
+
+    The same declares the keys of a simulated driver's world file: there a dotted name such as
+    ``stage.periodic_error.amplitude`` is a nested table and ``source[].level`` a key of each table
+    of an array. With ``random`` the file may give ``{ uniform = ["a", "b"] }`` in place of a
+    quantity; the value then arrives as the pair of floats and the driver draws from it.
     """
 
     name: str
@@ -271,6 +277,7 @@ class Setting:
     low: float | None = None
     high: float | None = None
     choices: tuple[str, ...] = ()
+    random: bool = False
 
 
 @dataclass(frozen=True)
@@ -278,7 +285,7 @@ class Context:
     """What a driver is given when it is opened, besides its settings.
 
     ``bench`` is the bench's description in plain SI numbers and texts, as
-    ``bench.spec.BenchSpec.for_drivers`` writes it; ``folder`` is where relative file names begin.
+    ``bench.spec.for_drivers`` writes it; ``folder`` is where relative file names begin.
     ``shared`` is one dictionary for all devices of one opening of one bench: simulated devices find
     their common world there.
     """
@@ -300,3 +307,4 @@ class Driver:
     settings: tuple[Setting, ...] = ()
     simulated: bool = False
     capabilities: frozenset[str] = frozenset()
+    world: tuple[Setting, ...] = ()
