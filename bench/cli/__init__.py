@@ -1,0 +1,76 @@
+"""The command line: thin, and quick to start. Each command lives in a module of its own."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from bench import __version__
+from bench.cli import check, drivers, fit, new, plan, records, run
+from bench.cli.output import EXIT_STOPPED, note
+
+__all__ = ["app", "main"]
+
+app = typer.Typer(
+    name="evenarm",
+    help="Bring the two arms of a bench interferometer to zero optical path difference, "
+    "and keep the evidence.",
+    add_completion=False,
+    no_args_is_help=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+app.command("new", help="Write a bench folder with a simulated bench.")(new.command)
+app.command("check", help="Check the bench description, procedures and devices.")(check.command)
+app.command("plan", help="Show the search plan, its cost and its odds.")(plan.command)
+app.command("run", help="Run a procedure here in the terminal.")(run.command)
+app.command("fit", help="Locate the zero in recorded scans.")(fit.command)
+app.add_typer(records.app, name="records", help="Read the journal and check its chain.")
+app.command("drivers", help="List what can be plugged in.")(drivers.command)
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        typer.echo(f"evenarm {__version__}")
+        raise typer.Exit(0)
+
+
+@app.callback(invoke_without_command=True)
+def start(
+    context: typer.Context,
+    bench: Annotated[
+        Path | None, typer.Option("--bench", help="The bench description to use.")
+    ] = None,
+    seed: Annotated[
+        int | None, typer.Option("--seed", help="Seed of a simulated bench's hidden truth.")
+    ] = None,
+    pace: Annotated[
+        str,
+        typer.Option("--pace", help="Simulated bench time: real, or how many times faster."),
+    ] = "10",
+    version: Annotated[
+        bool,
+        typer.Option("--version", help="Show the version.", callback=_show_version, is_eager=True),
+    ] = False,
+) -> None:
+    """Without a command: the terminal UI on this bench folder."""
+    if context.invoked_subcommand is None:
+        from bench.cli.screen import open_screen
+
+        raise typer.Exit(open_screen(bench=bench, seed=seed, pace=pace))
+
+
+def main() -> None:
+    """Entry point of the ``evenarm`` command."""
+    try:
+        app()
+    except KeyboardInterrupt:
+        note("stopped by the operator")
+        sys.exit(EXIT_STOPPED)
+    except BrokenPipeError:
+        sys.exit(EXIT_STOPPED)
