@@ -74,3 +74,4 @@ class LiveView:
     reason: str = ""
     result: dict[str, Any] = field(default_factory=dict)
     head: str = ""
+    accept_residual_opd_m: float | None = None  # what [accept] asks for, marked on pictures
