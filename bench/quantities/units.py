@@ -1,7 +1,7 @@
 """Names of units to factors and dimensions, without a parser that evaluates anything.
 
-The common units of a bench are a table; a name that is not in it is looked up in pint, name by name,
-so that pint is imported only where it is needed and never sees a number or an operator.
+The common units of a bench are a table; a name that is not in it is looked up in pint, name by
+name, so that pint is imported only where it is needed and never sees a number or an operator.
 """
 
 from __future__ import annotations
