@@ -40,7 +40,7 @@ class Available:
 
 
 class LoadFailure(ImportError):
-    """A plug-in that is listed but cannot be used; ``plugin`` says which and ``why`` what happened."""
+    """A plug-in that is listed but cannot be used: ``plugin`` says which, ``why`` what happened."""
 
     def __init__(self, plugin: Available, why: str) -> None:
         super().__init__(
@@ -60,7 +60,7 @@ def available() -> tuple[Available, ...]:
     """
     from importlib.metadata import entry_points
 
-    found = {(kind, name, target): "evenarm" for kind, name, target in BUILT_IN}
+    found = dict.fromkeys(BUILT_IN, "evenarm")
     for kind, group in GROUPS.items():
         for point in entry_points(group=group):
             source = point.dist.name if point.dist is not None else "an unnamed package"
@@ -95,7 +95,7 @@ def _import(row: Available) -> Driver:
         found: object = importlib.import_module(module_name)
         for part in attribute.split(".") if attribute else ():
             found = getattr(found, part)
-    except (Exception, SystemExit) as error:  # noqa: BLE001 - a plug-in's import may raise anything
+    except (Exception, SystemExit) as error:  # an import may raise anything
         raise LoadFailure(row, f"{type(error).__name__}: {error}") from error
     if not isinstance(found, Driver):
         raise LoadFailure(row, f"the object is a {type(found).__name__}, not a Driver")
