@@ -1,0 +1,197 @@
+"""The whole check of a journal; it reads, reports, and changes nothing."""
+
+from __future__ import annotations
+
+import json
+import re
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+from sqlalchemy import func, select
+from sqlalchemy.engine import Connection
+
+from bench.errors import JournalDamaged, printable
+from bench.journal.book import checked_entry
+from bench.journal.canonical import KIND, block_name, canonical_json, decode_block, number_text
+from bench.journal.model import GENESIS, Entry, Verification
+from bench.journal.place import refuse_unless_file
+from bench.journal.schema import ABOUT, BLOCKS, DDL, ENTRIES, SCHEMA_VERSION
+from bench.journal.store import Store, refuse_unless_journal
+
+_TIME = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d\.\d{6}Z\Z", re.ASCII)
+_NOTED = re.compile(r"[0-9a-f]{16,64}\Z")
+_MOST_PROBLEMS = 1000
+
+
+class _Findings:
+    """What was found so far, bounded: a file of zeros must not fill the memory with complaints."""
+
+    def __init__(self) -> None:
+        self.problems: list[str] = []
+        self._more = 0
+
+    def add(self, text: str) -> None:
+        if len(self.problems) < _MOST_PROBLEMS:
+            self.problems.append(printable(text))
+        else:
+            self._more += 1
+
+    def all(self) -> tuple[str, ...]:
+        more = (f"and {self._more} more problems",) if self._more else ()
+        return (*self.problems, *more)
+
+
+def verify_journal(
+    path: Path, progress: Callable[[int, int], None] | None, noted_heads: tuple[str, ...]
+) -> Verification:
+    """See ``bench.journal.verify``."""
+    refuse_unless_file(path, must_exist=True)
+    found = _Findings()
+    entries, head = 0, GENESIS
+    missing = {noted.strip().lower() for noted in noted_heads}
+    store = Store(path, write=False)
+    try:
+        refuse_unless_journal(store)
+        try:
+            with store.reading() as connection:
+                _check_file(connection, found)
+                entries, head, named = _check_chain(connection, path, found, missing, progress)
+                _check_blocks(connection, found, named)
+        except JournalDamaged as error:
+            found.add(f"after entry {entries}: {error.why or error.what}")
+    finally:
+        store.close()
+    for noted in sorted(missing):
+        found.add(
+            f"the noted head {noted[:16]} is not in this journal: entries were cut or rewritten"
+            if _NOTED.match(noted)
+            else f"the noted head {noted[:80]!r} is not 16 to 64 hexadecimal digits"
+        )
+    problems = found.all()
+    return Verification(entries, not problems, head, problems)
+
+
+def _check_file(connection: Connection, found: _Findings) -> None:
+    """The database's own structure: pages, indexes against tables, and our tables and guards."""
+    for (line,) in connection.exec_driver_sql("PRAGMA integrity_check"):
+        if line != "ok":
+            found.add(f"the file: {line}")
+    for row in connection.exec_driver_sql("PRAGMA foreign_key_check"):
+        found.add(f"block {row[1]} belongs to no entry")
+    held = {
+        row[0]: (row[1], row[2])
+        for row in connection.exec_driver_sql("SELECT name, tbl_name, sql FROM sqlite_master")
+    }
+    for name, text in DDL.items():
+        if name not in held:
+            found.add(f"the file: {name} is missing")
+        elif held[name][1] != text:
+            found.add(f"the file: the definition of {name} was changed")
+    for name, (table, text) in held.items():
+        if name not in DDL and table in ("entries", "blocks", "journal_schema") and text:
+            found.add(f"the file: {name} was added to {table}")
+    versions = connection.exec_driver_sql("SELECT version, about FROM journal_schema").all()
+    if [tuple(row) for row in versions] != [(SCHEMA_VERSION, ABOUT)]:
+        found.add("the file: the description of the schema was changed")
+
+
+def _check_chain(
+    connection: Connection,
+    path: Path,
+    found: _Findings,
+    missing: set[str],
+    progress: Callable[[int, int], None] | None,
+) -> tuple[int, str, dict[str, Entry]]:
+    total = connection.execute(select(func.count()).select_from(ENTRIES)).scalar_one()
+    prev, expected, done = GENESIS, 1, 0
+    named: dict[str, Entry] = {}
+    scans: dict[tuple[str | None, Any], int] = {}
+    rows = connection.execution_options(yield_per=500).execute(
+        select(ENTRIES).order_by(ENTRIES.c.seq)
+    )
+    for row in rows:
+        seq, sha256 = row[0], row[7]
+        if seq != expected:
+            found.add(f"entry {seq} comes where entry {expected} is due")
+        try:
+            entry = checked_entry(tuple(row), path)
+        except JournalDamaged as error:
+            found.add(error.why)
+        else:
+            _check_entry(entry, row, found)
+            if entry.kind == "readings":
+                _check_readings(entry, found, named, scans)
+        if row[6] != prev:
+            found.add(f"entry {seq}: it does not name the entry before it")
+        prev = sha256 if isinstance(sha256, str) else ""
+        missing -= {noted for noted in missing if _NOTED.match(noted) and prev.startswith(noted)}
+        expected, done = seq + 1, done + 1
+        if progress is not None and (done % 500 == 0 or done == total):
+            progress(done, total)
+    return done, printable(prev, 64), named
+
+
+def _check_entry(entry: Entry, row: Any, found: _Findings) -> None:
+    """What the hash cannot tell: that the content was in the one form that stands for it."""
+    try:
+        canonical = canonical_json(entry.body) == row[5]
+        bench_time = number_text(entry.bench_time_s) == row[2]
+    except (ValueError, RecursionError):
+        canonical = bench_time = False
+    if not canonical:
+        found.add(f"entry {entry.seq}: its body is not in canonical form")
+    if not bench_time:
+        found.add(f"entry {entry.seq}: its bench time is not in canonical form")
+    if not _TIME.match(entry.time_utc):
+        found.add(f"entry {entry.seq}: its time is not in canonical form")
+    if not KIND.match(entry.kind):
+        found.add(f"entry {entry.seq}: its kind is not in canonical form")
+    if entry.run is not None and (not entry.run or not entry.run.isprintable()):
+        found.add(f"entry {entry.seq}: its run is not in canonical form")
+
+
+def _check_readings(
+    entry: Entry,
+    found: _Findings,
+    named: dict[str, Entry],
+    scans: dict[tuple[str | None, Any], int],
+) -> None:
+    name = entry.body.get("block")
+    if not isinstance(name, str):
+        found.add(f"entry {entry.seq}: it names no block of readings")
+        return
+    named.setdefault(name, entry)
+    scan = (entry.run, json.dumps(entry.body.get("scan")))
+    due = scans.get(scan, 0)
+    if entry.body.get("sequence") != due:
+        found.add(f"entry {entry.seq}: block {due} of its scan is due")
+    scans[scan] = due + 1
+
+
+def _check_blocks(connection: Connection, found: _Findings, named: dict[str, Entry]) -> None:
+    awaited = dict(named)
+    rows = connection.execution_options(yield_per=20).execute(
+        select(BLOCKS).order_by(BLOCKS.c.entry)
+    )
+    for seq, name, data in rows:
+        entry = named.get(name) if isinstance(name, str) else None
+        if entry is None or entry.seq != seq:
+            found.add(f"the block at entry {seq} is named by no entry")
+            continue
+        del awaited[name]
+        if not isinstance(data, bytes) or block_name(data) != name:
+            found.add(f"entry {seq}: its readings do not agree with their hash")
+            continue
+        try:
+            columns = decode_block(data)
+        except ValueError as error:
+            found.add(f"entry {seq}: {error}")
+            continue
+        rows_said = entry.body.get("rows")
+        if entry.body.get("columns") != list(columns) or any(
+            len(column) != rows_said for column in columns.values()
+        ):
+            found.add(f"entry {seq}: its readings are not the columns and rows that it says")
+    for entry in awaited.values():
+        found.add(f"entry {entry.seq}: its readings are missing")
