@@ -1,0 +1,121 @@
+"""The stretch of a scan that the fit uses: around the packet, wide enough, and no wider."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from bench.fringes.detect import ENVELOPE_FWHM, Candidate
+from bench.fringes.model import FloatArray
+from bench.fringes.spectrum import band_grid
+from bench.fringes.zero import LinearFit, envelope_of, fit_linear
+
+REACH = 2.6  # half a window over the envelope's full width at half maximum
+MOST_UNKNOWNS = 160
+
+
+@dataclass(frozen=True)
+class Window:
+    """Readings ``first`` to ``stop`` of the sorted scan with the free-spectrum fit of them."""
+
+    first: int
+    stop: int
+    peak: float
+    width: float
+    low: float
+    high: float
+    fit: LinearFit
+
+
+def full_width(u: FloatArray, envelope: FloatArray) -> tuple[float, float]:
+    """Place of the maximum and full width at half of it, of a sampled envelope (m,)."""
+    top = int(np.argmax(envelope))
+    half = 0.5 * envelope[top]
+    below = np.nonzero(envelope < half)[0]
+    left = below[below < top]
+    right = below[below > top]
+    step = float(u[1] - u[0])
+    start = float(u[left[-1]]) if left.size else float(u[0])
+    end = float(u[right[0]]) if right.size else float(u[-1])
+    place = float(u[top])
+    if 0 < top < envelope.size - 1:
+        a, b, c = envelope[top - 1 : top + 2]
+        bend = a - 2.0 * b + c
+        if bend < 0.0:
+            place += 0.5 * step * float((a - c) / bend)
+    return place, max(end - start, step)
+
+
+def settle(
+    x: FloatArray, signal: FloatArray, candidate: Candidate, *, band_known: bool
+) -> Window | None:
+    """Centre and size the window on the packet; None where too few readings are left for it.
+
+    ``x`` rising. With ``band_known`` the analysed band is the half-power band widened to where a
+    Gaussian spectrum has fallen to 1.3 %; else it is measured.
+    """
+    span = float(x[-1] - x[0])
+    if band_known:
+        middle, size = 0.5 * (candidate.low + candidate.high), candidate.high - candidate.low
+        low, high = middle - 1.25 * size, middle + 1.25 * size
+        low = max(low, 0.1 * middle)
+        width = ENVELOPE_FWHM / size
+    else:
+        width = candidate.width
+        low, high = candidate.low, candidate.high
+        middle = 0.5 * (low + high)
+        low, high = max(0.3 * middle, 1.2 / width), 2.0 * middle
+    centre = candidate.x
+    result: Window | None = None
+    for turn in range(5):
+        reach = min(REACH * width, span)
+        first = int(np.searchsorted(x, centre - reach))
+        stop = int(np.searchsorted(x, centre + reach, side="right"))
+        frequency = band_grid(low, high, 2.0 * reach)
+        if frequency.size > MOST_UNKNOWNS or stop - first < 2 * frequency.size + 12:
+            # too few readings for the spectrum asked for: a smaller window has fewer unknowns
+            if stop - first < 24 or width <= ENVELOPE_FWHM / max(high - low, 1e-300):
+                return result
+            width *= 0.7
+            continue
+        part = x[first:stop]
+        fit = fit_linear(part, signal[first:stop], centre, frequency, np.ones(stop - first))
+        fine = np.linspace(part[0] - centre, part[-1] - centre, 8 * frequency.size + 1)
+        peak, seen = full_width(fine, np.abs(envelope_of(fit, fine)))
+        result = Window(first, stop, centre + peak, seen, low, high, fit)
+        moved = abs(peak) > 0.25 * seen
+        resized = not 0.7 < seen / width < 1.4
+        if not band_known:
+            narrower = measured_band(fit)
+            resized = resized or narrower[0] > low * 1.05 or narrower[1] < high * 0.95
+            low, high = narrower
+        if not (moved or resized) and turn > 0:
+            break
+        centre += peak
+        width = seen if resized else width
+        if band_known:
+            width = max(width, ENVELOPE_FWHM / (2.5 * (candidate.high - candidate.low)))
+    return result
+
+
+def measured_band(fit: LinearFit, share: float = 0.02) -> tuple[float, float]:
+    """Frequencies around the strongest one where the power stays above ``share`` of it and noise.
+
+    A gap of up to two grid points is bridged: spectra with two lobes are one source.
+    """
+    power = np.abs(fit.c) ** 2
+    noise = 4.0 * np.sum(fit.residual**2) / max(1, fit.freedom) / max(1, fit.residual.size)
+    limit = max(share * float(power.max()), 4.0 * float(noise))
+    over = power > limit
+    top = int(np.argmax(power * fit.frequency**2))
+    left = right = top
+    while left > 0 and bool(np.any(over[max(0, left - 3) : left])):
+        left -= 1
+    while right < power.size - 1 and bool(np.any(over[right + 1 : right + 4])):
+        right += 1
+    step = float(fit.frequency[1] - fit.frequency[0])
+    return (
+        max(float(fit.frequency[left]) - step, 0.5 * step),
+        float(fit.frequency[right]) + step,
+    )

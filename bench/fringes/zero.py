@@ -1,0 +1,233 @@
+"""Fit of a packet: level, free real spectrum, phase, group zero and dispersion, by least squares.
+
+The model of the fringes about ``origin`` is
+
+    s(u) = sum_k a_k cos(2 pi f_k u + theta(f_k)),
+    theta(f) = phase - 2 pi (f - f_r) shift + bend D(f),
+
+with u = x - origin, real a_k on a grid of frequencies across the band and D the dispersion's shape
+(zero with zero slope at f_r). ``shift`` is then where the group delays agree at f_r. With normal
+noise the least-squares solution is the maximum-likelihood one for a free spectrum (Kay 1993,
+Fundamentals of Statistical Signal Processing, ch. 7, from memory).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from bench.fringes.model import FloatArray
+from bench.fringes.spectrum import ComplexArray, harmonics, polynomial
+
+Shape = Callable[[FloatArray, float], FloatArray]
+TREND_ORDER = 2
+
+
+def square_law(scale: float) -> Shape:
+    """Second-order dispersion: half the square of (f - f_r) / scale."""
+
+    def shape(frequency: FloatArray, reference: float) -> FloatArray:
+        return np.asarray(0.5 * ((frequency - reference) / scale) ** 2, dtype=np.float64)
+
+    return shape
+
+
+@dataclass(frozen=True)
+class LinearFit:
+    """Free complex spectrum ``c`` (k,) of the readings about ``origin``, and what is left over."""
+
+    origin: float
+    frequency: FloatArray
+    c: ComplexArray
+    level: FloatArray
+    residual: FloatArray
+    leverage: FloatArray
+    freedom: int
+
+
+def fit_linear(
+    x: FloatArray, signal: FloatArray, origin: float, frequency: FloatArray, weight: FloatArray
+) -> LinearFit:
+    """Weighted least squares of a quadratic level and a free complex spectrum."""
+    level_columns = polynomial(x, TREND_ORDER)
+    design = np.hstack([level_columns, harmonics(x - origin, frequency)])
+    root = np.sqrt(weight)
+    left, scale, right = np.linalg.svd(design * root[:, None], full_matrices=False)
+    keep = scale > 1e-6 * scale[0]
+    left, scale, right = left[:, keep], scale[keep], right[keep]
+    solution = right.T @ ((left.T @ (signal * root)) / scale)
+    k, p = frequency.size, TREND_ORDER + 1
+    return LinearFit(
+        origin=origin,
+        frequency=frequency,
+        c=solution[p : p + k] + 1j * solution[p + k :],
+        level=level_columns @ solution[:p],
+        residual=signal - design @ solution,
+        leverage=np.einsum("ij,ij->i", left, left),
+        freedom=x.size - int(keep.sum()),
+    )
+
+
+def envelope_of(fit: LinearFit, u: FloatArray) -> ComplexArray:
+    """Analytic signal of a linear fit at ``u`` about its origin."""
+    return np.asarray(np.exp(2j * np.pi * np.outer(u, fit.frequency)) @ fit.c, dtype=np.complex128)
+
+
+@dataclass(frozen=True)
+class PacketFit:
+    """The nonlinear solution. ``names`` of the last three parameters: phase, shift, bend.
+
+    ``gain`` (parameters, n) maps a small change of the readings to the change it makes in each
+    parameter, which is what every uncertainty here is propagated with.
+    """
+
+    origin: float
+    reference: float
+    frequency: FloatArray
+    amplitude: FloatArray
+    phase: float
+    shift: float
+    bend: float
+    shape: Shape
+    level: FloatArray
+    fringes: FloatArray
+    slope: FloatArray
+    residual: FloatArray
+    leverage: FloatArray
+    gain: FloatArray
+    freedom: int
+    converged: bool
+
+    def theta(self, frequency: FloatArray) -> FloatArray:
+        """Phase of the spectrum about the origin, in radians."""
+        away = frequency - self.reference
+        return np.asarray(
+            self.phase
+            - 2.0 * np.pi * away * self.shift
+            + self.bend * self.shape(frequency, self.reference),
+            dtype=np.float64,
+        )
+
+    def analytic(self, u: FloatArray) -> ComplexArray:
+        """Analytic signal at ``u`` about the origin; its modulus is the envelope."""
+        c = self.amplitude * np.exp(1j * self.theta(self.frequency))
+        return np.asarray(np.exp(2j * np.pi * np.outer(u, self.frequency)) @ c, dtype=np.complex128)
+
+
+def fit_packet(
+    x: FloatArray,
+    signal: FloatArray,
+    weight: FloatArray,
+    start: LinearFit,
+    reference: float,
+    shape: Shape,
+    bend_prior: float,
+    shift: float,
+    bend: float = 0.0,
+    rounds: int = 25,
+) -> PacketFit:
+    """Damped Gauss-Newton from a linear fit; ``shift`` is the first guess about its origin.
+
+    ``bend_prior`` is the standard deviation, in units of ``bend``, of a weak prior that keeps a
+    dispersion without evidence near zero.
+    """
+    f, k = start.frequency, start.frequency.size
+    u = x - start.origin
+    levels = polynomial(x, TREND_ORDER)
+    p = levels.shape[1]
+    root = np.sqrt(weight)
+    carrier = 2.0 * np.pi * np.outer(u, f)
+    curve = shape(f, reference)
+    away = -2.0 * np.pi * (f - reference)
+
+    def theta_of(values: FloatArray) -> FloatArray:
+        return np.asarray(values[0] + away * values[1] + values[2] * curve, dtype=np.float64)
+
+    turned = start.c * np.exp(-1j * theta_of(np.array([0.0, shift, bend])))
+    phase = float(np.angle(np.sum(turned)))
+    tail = np.array([phase, shift, bend])
+    # The level, the spectrum and the three phases have very different sizes: one step of
+    # 1 rad, of a radian across the band, and of a radian of bend are the natural units.
+    units = np.array([1.0, 1.0 / max(float(np.max(np.abs(away))), 1e-300), 1.0])
+    prior_root = 1.0 / max(bend_prior, 1e-12)
+    noise = float(np.sqrt(np.sum(weight * start.residual**2) / max(1, start.freedom)))
+    prior_root *= max(noise, 1e-300)
+
+    def linear_part(values: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+        angle = carrier + theta_of(values)
+        cosine, sine = np.cos(angle), np.sin(angle)
+        columns = np.hstack([levels, cosine])
+        solution, *_ = np.linalg.lstsq(columns * root[:, None], signal * root, rcond=1e-7)
+        return cosine, sine, solution, signal - columns @ solution
+
+    cosine, sine, solution, residual = linear_part(tail)
+    cost = float(np.sum(weight * residual**2) + (prior_root * tail[2]) ** 2)
+    damping, converged = 1e-4, False
+    for _ in range(rounds):
+        turning = -sine * solution[p:]
+        phases = np.stack([turning.sum(axis=1), turning @ away, turning @ curve], axis=1) * units
+        jacobian = np.hstack([levels, cosine, phases]) * root[:, None]
+        rhs = np.concatenate([residual * root, [-prior_root * tail[2]]])
+        bottom = np.zeros((1, p + k + 3))
+        bottom[0, -1] = prior_root
+        full = np.vstack([jacobian, bottom])
+        normal = full.T @ full
+        gradient = full.T @ rhs
+        moved = False
+        for _try in range(6):
+            damped = normal + np.diag(np.diag(normal) * damping + 1e-12 * np.trace(normal) / p)
+            step = np.linalg.solve(damped, gradient)[-3:] * units
+            trial = tail + step
+            attempt = linear_part(trial)
+            new_cost = float(np.sum(weight * attempt[3] ** 2) + (prior_root * trial[2]) ** 2)
+            if new_cost <= cost * (1.0 + 1e-12):
+                moved = True
+                break
+            damping = max(damping, 1e-6) * 10.0
+        if not moved:
+            converged = True
+            break
+        damping = max(damping * 0.1, 1e-9)
+        small = bool(np.all(np.abs(step / units) < 1e-5)) or cost - new_cost < 1e-9 * cost
+        tail, cost = trial, new_cost
+        cosine, sine, solution, residual = attempt
+        if small:
+            converged = True
+            break
+
+    turning = -sine * solution[p:]
+    phases = np.stack([turning.sum(axis=1), turning @ away, turning @ curve], axis=1) * units
+    jacobian = np.hstack([levels, cosine, phases]) * root[:, None]
+    full = np.vstack([jacobian, np.zeros((1, p + k + 3))])
+    full[-1, -1] = prior_root
+    left, size, right = np.linalg.svd(full, full_matrices=False)
+    keep = size > 1e-8 * size[0]
+    inverse = (right[keep].T / size[keep]) @ left[:, keep].T
+    gain = inverse[:, :-1] * root[None, :]
+    gain[-3:] *= units[:, None]
+    amplitude = solution[p:]
+    if float(np.sum(amplitude)) < 0.0:
+        amplitude = -amplitude
+        gain[p : p + k] *= -1.0
+        tail = tail + np.array([np.pi, 0.0, 0.0])
+    slope = -(sine * solution[p:]) @ (2.0 * np.pi * f)
+    return PacketFit(
+        origin=start.origin,
+        reference=reference,
+        frequency=f,
+        amplitude=amplitude,
+        phase=float((tail[0] + np.pi) % (2.0 * np.pi) - np.pi),
+        shift=float(tail[1]),
+        bend=float(tail[2]),
+        shape=shape,
+        level=levels @ solution[:p],
+        fringes=cosine @ solution[p:],
+        slope=slope,
+        residual=residual,
+        leverage=np.einsum("ij,ij->i", left[:-1, keep], left[:-1, keep]),
+        gain=gain,
+        freedom=x.size - int(keep.sum()),
+        converged=converged,
+    )
