@@ -75,6 +75,11 @@ class SimulatedDetector:
         self._stream_from_s = None
         self._open = False
 
+    @property
+    def world(self) -> World:
+        """The hidden truth: for tests, and for whoever is told to reveal it."""
+        return self._world
+
     def operator_selects(self, source: str) -> None:
         """Put ``source`` into the interferometer: what a person does by hand at a real bench.
 

@@ -30,7 +30,7 @@ LIGHT_M_PER_S = 299_792_458.0  # exact, by definition of the metre
 SECOND_RADIATION_M_K = 1.438776877e-2  # h c / k, CODATA 2018
 TOLERANCE = 1e-4  # of the fringe amplitude, table and quadrature together; held by a test
 _OVERSAMPLING = 12  # table points for each period of the fastest beat within the spectrum
-_MOST_POINTS = 1 << 23
+_MOST_POINTS = 1 << 21  # of a table: 32 MB
 
 
 @dataclass(frozen=True)

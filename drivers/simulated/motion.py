@@ -126,6 +126,19 @@ class Path:
         self._times_s.append(at_s)
         self._add(at_s + brake_s, position_m + 0.5 * speed_m_s * brake_s, 0.0, 0.0, 0, rings=True)
 
+    def fastest_m_s(self, from_s: float, to_s: float) -> float:
+        """No less than the highest speed of the mirror between two times."""
+        first = max(0, bisect_right(self._times_s, from_s) - 1)
+        last = bisect_right(self._times_s, to_s) + 1
+        mechanics = self.mechanics
+        fastest_m_s = max(abs(knot.speed_m_s) for knot in self._knots[first:last])
+        wave = 2.0 * math.pi * abs(mechanics.periodic_m) / mechanics.period_m
+        play = 2.0 if mechanics.reversal_m < 0.0 else 1.0  # then both move together
+        fastest_m_s *= play * (1.0 + abs(mechanics.scale) + wave)
+        if mechanics.ringing_m and any(knot.rings for knot in self._knots[first:last]):
+            fastest_m_s += 8.0 * math.pi * mechanics.ringing_m / max(mechanics.settle_s, 1e-6)
+        return fastest_m_s
+
     def command_m(self, time_s: float) -> float:
         """Where the axis is by its own encoder."""
         return self._command(time_s)[0]

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from drivers.contracts import Context, Driver, Setting
+from drivers.contracts import Context, DeviceRefused, Driver, Setting
 from drivers.simulated.detector import SimulatedDetector
 from drivers.simulated.settings import FAULTS, WORLD_SETTINGS
 from drivers.simulated.stage import SimulatedStage
@@ -20,10 +20,22 @@ _CHANGE_TIME = Setting(
 _MEMORY = Setting("memory", "int", "readings kept for a slow computer", default=2_000_000, low=1)
 
 
+def _world(context: Context) -> World:
+    """The world that all devices of this opening share. Raises DeviceRefused."""
+    try:
+        return World.of(context)
+    except (KeyError, TypeError, ValueError) as error:
+        raise DeviceRefused(
+            f"the simulated bench cannot be built: {error}",
+            device="simulated bench",
+            mend="correct world.toml or bench.toml",
+        ) from error
+
+
 def _open_stage(settings: Mapping[str, Any], context: Context) -> SimulatedStage:
     stage = context.bench["stage"]
     return SimulatedStage(
-        World.of(context),
+        _world(context),
         speed_m_s=float(stage["speed_m_s"]),
         acceleration_m_s2=float(stage["acceleration_m_s2"]),
         resolution_m=float(stage.get("resolution_m") or 0.0),
@@ -34,7 +46,7 @@ def _open_detector(settings: Mapping[str, Any], context: Context) -> SimulatedDe
     detector = context.bench["detector"]
     limits = detector.get("range")
     return SimulatedDetector(
-        World.of(context),
+        _world(context),
         unit=str(detector.get("unit") or "V"),
         rate_hz=float(detector["rate_hz"]),
         integration_s=float(detector["integration_s"]),
@@ -49,12 +61,12 @@ def _open_detector(settings: Mapping[str, Any], context: Context) -> SimulatedDe
 def _open_changer(settings: Mapping[str, Any], context: Context) -> SimulatedChanger:
     change_time_s = settings.get("change_time")
     return SimulatedChanger(
-        World.of(context), change_time_s=2.0 if change_time_s is None else float(change_time_s)
+        _world(context), change_time_s=2.0 if change_time_s is None else float(change_time_s)
     )
 
 
 def _open_climate(settings: Mapping[str, Any], context: Context) -> SimulatedClimateSensor:
-    return SimulatedClimateSensor(World.of(context))
+    return SimulatedClimateSensor(_world(context))
 
 
 STAGE = Driver(

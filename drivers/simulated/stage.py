@@ -65,9 +65,11 @@ class SimulatedStage:
         with self._world.locked():
             self._refuse_motion()
             self._known = False
-            origin_m = self._world.ends_m[0]
             self._world.path.go(
-                origin_m, self._speed_m_s, self._acceleration_m_s2, self._world.motor_s()
+                self._world.origin_m,
+                self._speed_m_s,
+                self._acceleration_m_s2,
+                self._world.motor_s(),
             )
         while self._world.motor_s() < self._world.path.rest_s:
             left_s = timeout_s - (self._world.time_s() - began_s) - 2.0 * self._reply_s

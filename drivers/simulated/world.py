@@ -12,7 +12,7 @@ import math
 import threading
 import zlib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from functools import cache
 from typing import Any
 
 import numpy as np
@@ -24,6 +24,7 @@ from drivers.simulated.glass import GLASSES, Glass
 from drivers.simulated.light import Packet, lamp, packet
 from drivers.simulated.motion import Mechanics, Path
 from drivers.simulated.settings import WORLD_SETTINGS
+from drivers.simulated.truth import Truth
 
 __all__ = ["Truth", "World"]
 
@@ -31,48 +32,6 @@ FloatArray = NDArray[np.float64]
 
 _DEFAULTS = {setting.name: setting.default for setting in WORLD_SETTINGS}
 _SHARED_KEY = "simulated.world"
-
-
-@dataclass(frozen=True)
-class Truth:
-    """What a run tries to find out. Times are seconds since the world began.
-
-    ``zero_m`` is the reading of zero geometric path difference, approached increasing; what glass,
-    drift and the stage's own errors make of it is worked out by the methods.
-    """
-
-    zero_m: float
-    contrast: float
-    phase_rad: float
-    glass_material: str | None
-    glass_thickness_m: float
-    path_factor: float
-    air_index: float
-    drift_m_s: float
-    mechanics: Mechanics
-
-    def glass_path_m(self, wavelength_m: float) -> float:
-        """Group path that residual glass adds to arm A, as OPD."""
-        if self.glass_material is None:
-            return 0.0
-        group_index = GLASSES[self.glass_material].group_index(np.asarray([1.0 / wavelength_m]))[0]
-        return self.glass_thickness_m * self.air_index * (float(group_index) - 1.0)
-
-    def group_zero_m(self, wavelength_m: float, time_s: float = 0.0) -> float:
-        """Stage reading, approached increasing, at which the arms' group delays are equal."""
-        offset_m = self.glass_path_m(wavelength_m) + self.drift_m_s * time_s
-        mirror_m = self.zero_m - offset_m / (self.air_index * self.path_factor)
-        return self.mechanics.reading_m(mirror_m)
-
-    def opd_at(self, reading_m: float, wavelength_m: float, time_s: float = 0.0) -> float:
-        """Group OPD left when the stage stands at ``reading_m``, approached increasing."""
-        mirror_m = reading_m + float(self.mechanics.errors_m(np.asarray(reading_m)))
-        return self.mirror_opd_m(mirror_m, wavelength_m, time_s)
-
-    def mirror_opd_m(self, mirror_m: float, wavelength_m: float, time_s: float = 0.0) -> float:
-        """Group OPD with the mirror itself at ``mirror_m``."""
-        air_m = self.air_index * self.path_factor * (mirror_m - self.zero_m)
-        return air_m + self.glass_path_m(wavelength_m) + self.drift_m_s * time_s
 
 
 class World:
@@ -112,6 +71,7 @@ class World:
             ),
         )
         low_m, high_m = stage.get("travel_m") or (zero_m - 0.01, zero_m + 0.01)
+        self.origin_m = low_m
         margin_m = 0.02 * (high_m - low_m)
         self.ends_m = (
             self.value("stage.low_end", low_m - margin_m),
@@ -124,11 +84,15 @@ class World:
         self.faults = Faults.declared(self._tables("fault"))
         self._position_noise_m = self.value("stage.position_noise")
         self._jitter = self.stream("stage.position_noise")
-        shakes = [(self.value("vibration.amplitude"), self.value("vibration.frequency"))]
-        self._vibration = (*shakes[0], self.draw("vibration.phase", 0.0, 2.0 * math.pi))
+        self._vibration = (
+            self.value("vibration.amplitude"),
+            self.value("vibration.frequency"),
+            self.draw("vibration.phase", 0.0, 2.0 * math.pi),
+        )
         self._sources = {str(source["name"]): source for source in bench["sources"]}
         if not self._sources:
             raise ValueError("a simulated bench needs a source")
+        self._lamps = {name: lamp(item["spectrum"]) for name, item in self._sources.items()}
         self._levels = {
             str(table["name"]): table["level"]
             for table in self._tables("source")
@@ -273,7 +237,7 @@ class World:
                 if self.truth.glass_material is not None:
                     glass = GLASSES[self.truth.glass_material]
                 self._packets[source] = packet(
-                    lamp(self._sources[source]["spectrum"]),
+                    self._lamps[source],
                     glass,
                     self.truth.glass_thickness_m,
                     self.truth.air_index,
@@ -324,10 +288,27 @@ class World:
     def _nodes(
         self, time_s: FloatArray, integration_s: float, carrier: float
     ) -> tuple[FloatArray, FloatArray]:
-        edges_m = [self.opd_m(time_s + share * integration_s) for share in (-0.5, 0.0, 0.5)]
-        travelled_m = sum(np.abs(np.diff(np.stack(edges_m), axis=0)))
+        """Gauss-Legendre nodes (-1 to 1) and weights that suit the fastest reading of a block."""
+        from_s = float(time_s.min()) - 0.5 * integration_s
+        to_s = float(time_s.max()) + 0.5 * integration_s
+        motor_s = self.faults.motion_time_s(np.asarray([from_s, to_s]))
+        with self._lock:
+            fastest_m_s = self.path.fastest_m_s(float(motor_s[0]), float(motor_s[1]))
+        path_m_s = abs(self.truth.air_index * self.truth.path_factor) * fastest_m_s
+        path_m_s += abs(self.truth.drift_m_s)
+        amplitude_m, frequency_hz, _ = self._vibration
+        path_m_s += 2.0 * math.pi * frequency_hz * amplitude_m
+        for fault in self.faults.of("vibration burst"):
+            if fault.start_s < to_s and fault.end_s > from_s:
+                path_m_s += 2.0 * math.pi * fault.frequency_hz * fault.amplitude_m
         # The spectrum's blue end turns faster than its mean.
-        turn_rad = 1.5 * 2.0 * math.pi * carrier * float(np.max(travelled_m, initial=0.0))
+        turn_rad = 1.5 * 2.0 * math.pi * carrier * path_m_s * integration_s
         if turn_rad < 0.01:
             return np.zeros(1), np.full(1, 2.0)
-        return np.polynomial.legendre.leggauss(min(64, 3 + math.ceil(0.6 * turn_rad)))
+        return _legendre(min(64, 3 + math.ceil(0.6 * turn_rad)))
+
+
+@cache
+def _legendre(count: int) -> tuple[FloatArray, FloatArray]:
+    nodes, weights = np.polynomial.legendre.leggauss(count)
+    return np.asarray(nodes, dtype=np.float64), np.asarray(weights, dtype=np.float64)
