@@ -22,7 +22,7 @@ class RunControl(Protocol):
 
     @property
     def finished(self) -> bool:
-        """Whether the run has ended, one way or another, and nothing moves any more on its account."""
+        """Whether the run has ended, one way or another, and moves nothing any more."""
         ...
 
     def view(self) -> LiveView:
@@ -49,5 +49,5 @@ class RunControl(Protocol):
         ...
 
     def close(self, timeout_s: float) -> None:
-        """Stop whatever moves, wait for the run to end, let go of devices and journal. Idempotent."""
+        """Stop what moves, wait for the end, let go of devices and journal. Idempotent."""
         ...

@@ -1,0 +1,315 @@
+"""The terminal UI: one Run screen over one run, and its keys.
+
+The run is performed elsewhere (``RunControl``); this asks for a snapshot ten times a second and
+shows it. Nothing here may stop or move anything by accident, and the stop key works in every state.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import replace
+from typing import ClassVar
+
+from rich.text import Text
+from textual.app import App, ComposeResult
+from textual.binding import Binding, BindingType
+from textual.containers import Horizontal, Vertical
+from textual.theme import Theme
+from textual.widgets import Input
+
+from bench.errors import EvenarmError, printable
+from bench.tui.control import RunControl
+from bench.tui.glyphs import FULL, Glyphs
+from bench.tui.palette import PALETTES, Palette
+from bench.tui.panels import Panel, QuestionPanel
+from bench.tui.scan_view import scan_text
+from bench.tui.scene import Scene
+from bench.tui.views import bench_text, foot_text, head_text, next_text, steps_text, zero_text
+
+__all__ = ["EvenarmApp"]
+
+POLL_S = 0.1
+ARMED_AFTER_S = 0.4
+"""A yes or no counts only so long after its question came up: a key hit twice answers once."""
+
+
+def _theme(palette: Palette) -> Theme:
+    return Theme(
+        name=palette.name,
+        dark=palette.dark,
+        primary=palette.text,
+        foreground=palette.text,
+        background=palette.background,
+        surface=palette.background,
+        panel=palette.calm_bar,
+        success=palette.good,
+        warning=palette.warn,
+        error=palette.bad,
+        variables={
+            "line-background": palette.calm_bar,
+            "line-text": palette.calm_text,
+            "input-cursor-background": palette.calm_text,
+            "input-cursor-foreground": palette.calm_bar,
+            "input-selection-background": palette.act_bar,
+        },
+    )
+
+
+class EvenarmApp(App[int]):
+    """One run on the screen. ``run()`` returns after the operator has left; see ``exit_status``."""
+
+    ENABLE_COMMAND_PALETTE = False
+    TITLE = "Evenarm"
+
+    BINDINGS: ClassVar[list[BindingType]] = [
+        Binding("f8,ctrl+c", "software_stop", "software stop", priority=True),
+        Binding("ctrl+q", "leave", "leave", priority=True),
+        Binding("f4", "colours", "colours", priority=True),
+        Binding("q,Q", "leave", "leave"),
+        Binding("enter", "begin", "start"),
+        Binding("y,Y", "say(True)", "yes"),
+        Binding("n,N", "say(False)", "no"),
+        Binding("up", "scroll_words(-1)", priority=True),
+        Binding("down", "scroll_words(1)", priority=True),
+        Binding("pageup", "page_words(-1)", priority=True),
+        Binding("pagedown", "page_words(1)", priority=True),
+    ]
+
+    CSS = """
+    Screen { background: $background; color: $foreground; layers: base; overflow: hidden; }
+    #head { height: 1; }
+    #next { height: 3; }
+    #body { height: 1fr; }
+    #left { width: 1fr; max-width: 38; padding: 0 1 0 1; }
+    #right { width: 2fr; padding: 0 1 0 1; }
+    #steps { height: 1fr; }
+    #bench { height: 7; }
+    #zero { height: 8; margin: 0 0 0 0; }
+    #scan { height: 1fr; }
+    #foot { height: 1; }
+    #question { height: 1fr; }
+    #question-title, #question-hint { height: 1; }
+    #question-scroll { height: 1fr; scrollbar-size: 0 0; background: $background; }
+    #question-words { height: auto; }
+    #question-name, #question-name:focus {
+        height: 1; border: none; padding: 0 1;
+        background: $line-background; color: $line-text; background-tint: transparent;
+    }
+    """
+
+    def __init__(
+        self,
+        control: RunControl,
+        *,
+        glyphs: Glyphs = FULL,
+        beat: Callable[[], None] = lambda: None,
+        now_s: Callable[[], float] = time.monotonic,
+    ) -> None:
+        super().__init__()
+        for palette in PALETTES:
+            self.register_theme(_theme(palette))
+        self.theme = PALETTES[0].name
+        self._control = control
+        self._beat = beat
+        self._now_s = now_s
+        self._answered: set[str] = set()
+        self._asked_since: tuple[str, float] = ("", 0.0)
+        self._leave_when_done: int | None = None
+        self.failure: BaseException | None = None
+        self.scene = Scene(control.view(), glyphs=glyphs)
+        self._look()
+
+    # --- what is shown ---------------------------------------------------------------------------
+
+    def compose(self) -> ComposeResult:
+        yield Panel(lambda width, _: head_text(self.scene, width), id="head")
+        yield Panel(lambda width, _: next_text(self.scene, width), id="next", grows=True)
+        with Horizontal(id="body"):
+            with Vertical(id="left"):
+                yield Panel(lambda w, h: steps_text(self.scene, w, h), id="steps")
+                yield Panel(lambda width, _: bench_text(self.scene, width), id="bench")
+            with Vertical(id="right"):
+                yield Panel(self._zero, id="zero", grows=True)
+                yield Panel(lambda w, h: scan_text(self.scene, w, h), id="scan")
+                yield QuestionPanel(lambda: self.scene)
+        yield Panel(lambda width, _: foot_text(self.scene, width), id="foot")
+
+    def _zero(self, width: int, _: int) -> Text:
+        compact = self.scene.question is not None and self.size.height < 32
+        return zero_text(self.scene, width, compact=compact)
+
+    def on_mount(self) -> None:
+        self.set_interval(POLL_S, self._poll)
+        self._poll()
+
+    def _look(self) -> None:
+        """Take a fresh snapshot of the run."""
+        control = self._control
+        finished = control.finished
+        view = control.view()
+        asked = view.question
+        if asked is not None and (asked.id in self._answered or finished or self.scene.stop_asked):
+            asked = None
+        if asked is not None and asked.id != self._asked_since[0]:
+            self._asked_since = (asked.id, self._now_s())
+            self.scene = replace(self.scene, note="")
+        elif asked is None and self.scene.question is not None:
+            self.scene = replace(self.scene, note="", more_below=False)
+        leaving = self.scene.asking_to_leave and not finished
+        self.scene = replace(
+            self.scene,
+            view=view,
+            started=control.started,
+            finished=finished,
+            question=asked,
+            asking_to_leave=leaving,
+        )
+
+    def _poll(self) -> None:
+        self._beat()
+        self._look()
+        if self.scene.finished and self._leave_when_done is not None:
+            self.exit(self._leave_when_done)
+            return
+        self._show()
+
+    def _show(self) -> None:
+        if not self.screen_stack or not self.is_mounted_screen():
+            return
+        base = self.screen_stack[0]
+        panel = base.query_one(QuestionPanel)
+        asking = self.scene.question is not None
+        base.query_one("#scan").display = not asking
+        panel.show(self.scene.question if not self.scene.asking_to_leave else None)
+        if asking:
+            self.scene = replace(self.scene, more_below=panel.more_below)
+        for part in base.query(Panel):
+            part.repaint()
+
+    def is_mounted_screen(self) -> bool:
+        """Whether the parts of the screen are there to be painted."""
+        return bool(self.screen_stack[0].query("#foot"))
+
+    def refresh_scene(self) -> None:
+        """Show at once what a key has changed, without waiting for the next look."""
+        self._look()
+        self._show()
+
+    # --- keys ------------------------------------------------------------------------------------
+
+    def action_software_stop(self) -> None:
+        """Stop, at once, in every state."""
+        self._control.stop("software stop pressed")
+        self.scene = replace(self.scene, stop_asked=True, asking_to_leave=False)
+        self.refresh_scene()
+
+    def action_begin(self) -> None:
+        if self.scene.phase != "ready":
+            return
+        self._attempt(self._control.start)
+
+    def action_say(self, yes: bool) -> None:
+        """Yes or no: to leaving where that is asked, else to the question that is open."""
+        asked = self.scene.question
+        if self.scene.asking_to_leave:
+            self.scene = replace(self.scene, asking_to_leave=False)
+            if yes:
+                self._control.stop("the operator left")
+                self.scene = replace(self.scene, stop_asked=True)
+                self._leave_when_done = 130
+        elif asked is not None and asked.kind == "confirm":
+            if self._now_s() - self._asked_since[1] < ARMED_AFTER_S:
+                return
+            if not self._read_to_end():
+                return
+            self._answer(asked.id, yes)
+        self.refresh_scene()
+
+    def on_input_submitted(self, event: Input.Submitted) -> None:
+        asked = self.scene.question
+        if asked is None or asked.kind != "acknowledge" or self.scene.asking_to_leave:
+            return
+        name = printable(event.value).strip()
+        if not self._read_to_end():
+            return
+        if not any(ch.isalpha() for ch in name):
+            self._remark("Type your name first.")
+            return
+        self._answer(asked.id, name)
+        self.refresh_scene()
+
+    def _read_to_end(self) -> bool:
+        if self.screen_stack[0].query_one(QuestionPanel).read_to_end:
+            return True
+        self._remark(f"Read to the end first: {self.scene.glyphs.down} key.")
+        return False
+
+    def _remark(self, words: str) -> None:
+        self.scene = replace(self.scene, note=words)
+        self.refresh_scene()
+
+    def _answer(self, question_id: str, value: str | bool) -> None:
+        self._answered.add(question_id)
+        self._attempt(lambda: self._control.answer(question_id, value))
+
+    def _attempt(self, act: Callable[[], None]) -> None:
+        """Do what may be refused; a refusal ends the screen and is told after it."""
+        try:
+            act()
+        except EvenarmError as error:
+            self.failure = error
+            self._control.stop("the run could not go on")
+            self.exit(error.exit_status)
+        else:
+            self.refresh_scene()
+
+    def action_leave(self) -> None:
+        """Leave at once where nothing runs; else ask, because leaving means stopping first."""
+        if not self.scene.started or self.scene.finished:
+            self.exit(self.outcome_status())
+            return
+        self.scene = replace(self.scene, asking_to_leave=not self.scene.stop_asked)
+        if self.scene.stop_asked:
+            self._leave_when_done = 130
+        self.refresh_scene()
+
+    def action_colours(self) -> None:
+        names = [palette.name for palette in PALETTES]
+        index = (names.index(self.theme) + 1) % len(names)
+        self.theme = names[index]
+        self.scene = replace(self.scene, palette=PALETTES[index])
+        self._show()
+
+    def action_scroll_words(self, rows: int) -> None:
+        if self.scene.question is not None:
+            self.screen_stack[0].query_one(QuestionPanel).scroll_by(rows)
+            self.scene = replace(self.scene, note="")
+            self.refresh_scene()
+
+    def action_page_words(self, pages: int) -> None:
+        panel = self.screen_stack[0].query_one(QuestionPanel)
+        self.action_scroll_words(pages * panel.page)
+
+    # --- the end ---------------------------------------------------------------------------------
+
+    def outcome_status(self) -> int:
+        """Exit status for where the run stands now."""
+        if not self.scene.started:
+            return 130 if self.scene.stop_asked else 0
+        statuses = {"accepted": 0, "rejected": 1, "not found": 1, "stopped": 130}
+        return statuses.get(self.scene.view.outcome or "", 3)
+
+    def leave_from_outside(self, status: int) -> None:
+        """End the screen, asked for by another thread."""
+        self.call_later(self.exit, status)
+
+    def _handle_exception(self, error: Exception) -> None:
+        # A part of the screen failed. Whatever moves is stopped before anything else is done.
+        self.failure = self.failure or error
+        self._control.stop("the screen failed")
+        super()._handle_exception(error)
+
+    def _fatal_error(self) -> None:
+        # No traceback with local values on the terminal: ``run_app`` tells what happened.
+        self._close_messages_no_wait()

@@ -1,0 +1,128 @@
+"""Widgets: places on the screen that redraw only what changed, and the one place for questions."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+from rich.text import Text
+from textual.app import ComposeResult
+from textual.containers import Vertical, VerticalScroll
+from textual.events import Resize
+from textual.widgets import Input, Static
+
+from bench.procedure.live import Question
+from bench.tui.scene import Scene
+from bench.tui.views import question_hint, question_lines, title_row
+
+__all__ = ["LONGEST_NAME", "Panel", "QuestionPanel"]
+
+LONGEST_NAME = 80
+
+
+class Panel(Static):
+    """Text painted for the size there is; nothing is sent to the terminal when nothing changed."""
+
+    def __init__(self, paint: Callable[[int, int], Text], *, id: str, grows: bool = False) -> None:
+        super().__init__(Text(" "), id=id, markup=False)
+        self._paint = paint
+        self._grows = grows
+        self._shown: Text | None = None
+
+    def repaint(self) -> None:
+        """Paint again. With ``grows`` the height follows the number of rows."""
+        width, height = self.size.width, self.size.height
+        if width < 1:
+            return
+        text = self._paint(width, height)
+        if text == self._shown:
+            return
+        self._shown = text
+        if self._grows:
+            rows = text.plain.count("\n") + 1
+            if rows != height:
+                self.styles.height = rows
+        self.update(text, layout=False)
+
+    def on_resize(self, _: Resize) -> None:
+        self._shown = None
+        self.repaint()
+
+
+class QuestionPanel(Vertical):
+    """What only a person can answer: its words, to be scrolled, and a line for a name."""
+
+    def __init__(self, scene: Callable[[], Scene]) -> None:
+        super().__init__(id="question")
+        self._scene = scene
+        self._question: Question | None = None
+        self._read_to_end = False
+
+    def compose(self) -> ComposeResult:
+        yield Panel(self._title, id="question-title")
+        with VerticalScroll(id="question-scroll", can_focus=False):
+            yield Panel(self._words, id="question-words", grows=True)
+        yield Panel(self._hint, id="question-hint")
+        yield Input(id="question-name", max_length=LONGEST_NAME, select_on_focus=False)
+
+    def _title(self, width: int, _: int) -> Text:
+        asked = self._scene().question
+        return title_row((asked.title if asked else "").upper()[: width - 2], width, self._scene())
+
+    def _words(self, width: int, _: int) -> Text:
+        scene = self._scene()
+        return Text("\n".join(question_lines(scene, width)), style=scene.palette.text)
+
+    def _hint(self, width: int, _: int) -> Text:
+        return question_hint(self._scene(), width)
+
+    @property
+    def _scroller(self) -> VerticalScroll:
+        return self.query_one("#question-scroll", VerticalScroll)
+
+    @property
+    def read_to_end(self) -> bool:
+        """Whether the last row has been on the screen since this question was opened."""
+        return self._read_to_end
+
+    @property
+    def more_below(self) -> bool:
+        """Whether rows are hidden below now."""
+        scroller = self._scroller
+        return scroller.max_scroll_y - scroller.scroll_target_y > 0.5
+
+    def show(self, question: Question | None) -> None:
+        """Open, change or close; a new question begins unread and with an empty line."""
+        fresh = question is not None and (
+            self._question is None or self._question.id != question.id
+        )
+        self._question = question
+        self.display = question is not None
+        line = self.query_one("#question-name", Input)
+        if question is None:
+            if line.has_focus:
+                self.screen.set_focus(None)
+            return
+        typed = question.kind == "acknowledge"
+        line.display = typed
+        if fresh:
+            self._read_to_end = False
+            line.value = ""
+            self._scroller.scroll_home(animate=False)
+        if typed and not line.has_focus:
+            line.focus(scroll_visible=False)
+        elif not typed and line.has_focus:
+            self.screen.set_focus(None)
+        for panel in self.query(Panel):
+            panel.repaint()
+        laid_out = self._scroller.size.height > 0 and self._scroller.virtual_size.height > 0
+        if not fresh and laid_out and not self.more_below:
+            self._read_to_end = True
+
+    def scroll_by(self, rows: int) -> None:
+        """Scroll the words; ``rows`` counts down."""
+        self._scroller.scroll_relative(y=rows, animate=False)
+
+    @property
+    def page(self) -> int:
+        """Rows that are seen at once."""
+        return max(1, self._scroller.size.height - 1)
