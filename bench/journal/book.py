@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import os
 import threading
 from collections.abc import Callable, Collection, Iterator, Mapping
@@ -15,7 +14,7 @@ import numpy as np
 from sqlalchemy import func, insert, select
 from sqlalchemy.engine import Connection
 
-from bench.errors import JournalDamaged, JournalError
+from bench.errors import JournalError
 from bench.journal.canonical import (
     KIND,
     FloatArray,
@@ -34,8 +33,9 @@ from bench.journal.place import (
     refuse_unless_file,
     take_hold,
 )
+from bench.journal.rows import checked_entry, damaged
 from bench.journal.schema import BLOCKS, ENTRIES
-from bench.journal.store import Store, prepare, refuse_unless_journal
+from bench.journal.store import Store, prepare, refuse_unless_journal, use_log
 
 _CHUNK = 500
 _TAIL = 200
@@ -64,6 +64,7 @@ class Journal:
         self._sequences: dict[tuple[str, str], int] = {}
         self._identity = _identity(path)
         self._head = self._read_head()
+        self._opened_at = self._head.entries
 
     def __enter__(self) -> Journal:
         return self
@@ -131,19 +132,28 @@ class Journal:
 
         Each is checked against its own hash as it is read. Raises JournalDamaged.
         """
+        return self._entries(run, kinds, after, 2**62)
+
+    def _entries(
+        self, run: str | None, kinds: Collection[str] | None, after: int, upto: int
+    ) -> Iterator[Entry]:
         last = after
+        asked = select(ENTRIES).where(ENTRIES.c.seq <= upto).order_by(ENTRIES.c.seq)
+        if run is not None:
+            asked = asked.where(ENTRIES.c.run == run)
+        if kinds is not None:
+            # Where the run is given, its index is the one to use: joining the kind with an empty
+            # text keeps the database from walking through that kind of all runs.
+            kind = ENTRIES.c.kind if run is None else ENTRIES.c.kind + ""
+            asked = asked.where(kind.in_(sorted(kinds)))
         while True:
-            query = select(ENTRIES).where(ENTRIES.c.seq > last).order_by(ENTRIES.c.seq)
-            if run is not None:
-                query = query.where(ENTRIES.c.run == run)
-            if kinds is not None:
-                query = query.where(ENTRIES.c.kind.in_(sorted(kinds)))
+            query = asked.where(ENTRIES.c.seq > last)
             with self._store.reading() as connection:
                 rows = connection.execute(query.limit(_CHUNK)).all()
             for row in rows:
                 entry = checked_entry(tuple(row), self.path)
                 if entry.seq <= last:
-                    raise _damaged(self.path, f"entry {entry.seq} comes after entry {last}")
+                    raise damaged(self.path, f"entry {entry.seq} comes after entry {last}")
                 last = entry.seq
                 yield entry
             if len(rows) < _CHUNK:
@@ -168,11 +178,12 @@ class Journal:
 
         Raises JournalDamaged where a block is missing or does not agree with its hash.
         """
-        parts = [self.block(entry) for entry in self._readings_of(run, scan)]
+        found = self.entries(run, ("readings",))
+        parts = [self.block(entry) for entry in found if entry.body.get("scan") == scan]
         if not parts:
             return {}
         if any(list(part) != list(parts[0]) for part in parts):
-            raise _damaged(self.path, f"the blocks of scan {scan} have different columns")
+            raise damaged(self.path, f"the blocks of scan {scan} have different columns")
         return {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
 
     def block(self, entry: Entry) -> dict[str, FloatArray]:
@@ -181,11 +192,11 @@ class Journal:
         with self._store.reading() as connection:
             row = connection.execute(select(BLOCKS.c.bytes).where(BLOCKS.c.name == name)).first()
         if row is None or not isinstance(row[0], bytes) or block_name(row[0]) != name:
-            raise _damaged(self.path, f"entry {entry.seq}: its readings are missing or changed")
+            raise damaged(self.path, f"entry {entry.seq}: its readings are missing or changed")
         try:
             return decode_block(row[0])
         except ValueError as error:
-            raise _damaged(self.path, f"entry {entry.seq}: {error}") from error
+            raise damaged(self.path, f"entry {entry.seq}: {error}") from error
 
     def close(self) -> None:
         """Let go of the file and of the writer's lock. Idempotent."""
@@ -199,14 +210,12 @@ class Journal:
 
     # --- inside ----------------------------------------------------------------------------------
 
-    def _readings_of(self, run: str, scan: str) -> Iterator[Entry]:
-        for entry in self.entries(run, ("readings",)):
-            if entry.body.get("scan") == scan:
-                yield entry
-
     def _next_sequence(self, run: str, scan: str) -> int:
         known = self._sequences.get((run, scan))
-        return sum(1 for _ in self._readings_of(run, scan)) if known is None else known
+        if known is None:  # then any blocks of it were there before this journal was opened
+            earlier = self._entries(run, ("readings",), 0, self._opened_at)
+            known = sum(1 for entry in earlier if entry.body.get("scan") == scan)
+        return known
 
     def _read_head(self) -> Head:
         with self._store.reading() as connection:
@@ -249,7 +258,7 @@ class Journal:
             row["sha256"] = entry_hash(**row)
             with self._store.writing() as connection:
                 if _head(connection, self.path) != self._head:
-                    raise _damaged(self.path, "something else wrote to it during this run")
+                    raise damaged(self.path, "something else wrote to it during this run")
                 connection.execute(insert(ENTRIES).values(**row))
                 if block is not None:
                     self._keep_block(connection, row["seq"], block)
@@ -262,7 +271,7 @@ class Journal:
         if there is None:
             connection.execute(insert(BLOCKS).values(entry=seq, name=name, bytes=data))
         elif there[0] != data:
-            raise _damaged(self.path, f"the block {name[:16]} is not what its name says")
+            raise damaged(self.path, f"the block {name[:16]} is not what its name says")
 
 
 def open_for_writing(path: Path, *, who: str, now: Callable[[], datetime]) -> Journal:
@@ -275,6 +284,7 @@ def open_for_writing(path: Path, *, who: str, now: Callable[[], datetime]) -> Jo
         store = Store(path, write=True)
         prepare(store)
         refuse_unless_journal(store)
+        use_log(store)
         with store.writing():
             pass  # a file that cannot be written is found now, not at the first move
         journal = Journal(path, store, hold, now)
@@ -299,36 +309,6 @@ def open_for_reading(path: Path, *, now: Callable[[], datetime]) -> Journal:
         raise
 
 
-def checked_entry(row: tuple[Any, ...], path: Path) -> Entry:
-    """A row of ``entries``, in the order of its columns, as an Entry. Raises JournalDamaged."""
-    seq, time_utc, bench_time_s, kind, run, body, prev, sha256 = row
-    texts = (time_utc, kind, body, prev, sha256)
-    optional = (bench_time_s, run)
-    if not all(isinstance(text, str) for text in texts) or not all(
-        text is None or isinstance(text, str) for text in optional
-    ):
-        raise _damaged(path, f"entry {seq}: a column holds what is not text")
-    content = {
-        "prev": prev,
-        "seq": seq,
-        "time_utc": time_utc,
-        "bench_time_s": bench_time_s,
-        "kind": kind,
-        "run": run,
-        "body": body,
-    }
-    if entry_hash(**content) != sha256:
-        raise _damaged(path, f"entry {seq}: its content does not agree with its hash")
-    try:
-        parsed = json.loads(body)
-        bench_s = None if bench_time_s is None else float(json.loads(bench_time_s))
-    except (ValueError, TypeError, RecursionError) as error:
-        raise _damaged(path, f"entry {seq}: its content cannot be read") from error
-    if not isinstance(parsed, dict):
-        raise _damaged(path, f"entry {seq}: its body is not a JSON object")
-    return Entry(seq, time_utc, kind, run, parsed, prev, sha256, bench_s)
-
-
 def _head(connection: Connection, path: Path) -> Head:
     row = connection.execute(
         select(ENTRIES.c.seq, ENTRIES.c.sha256).order_by(ENTRIES.c.seq.desc()).limit(1)
@@ -336,7 +316,7 @@ def _head(connection: Connection, path: Path) -> Head:
     if row is None:
         return Head(0, GENESIS)
     if not isinstance(row[1], str):
-        raise _damaged(path, f"entry {row[0]}: its hash is not text")
+        raise damaged(path, f"entry {row[0]}: its hash is not text")
     return Head(row[0], row[1])
 
 
@@ -347,7 +327,7 @@ def _check_tail(journal: Journal) -> None:
     expected = first
     for entry in journal.entries(after=first - 1):
         if entry.seq != expected or (prev is not None and entry.prev != prev):
-            raise _damaged(journal.path, f"entry {entry.seq} does not follow entry {expected - 1}")
+            raise damaged(journal.path, f"entry {entry.seq} does not follow entry {expected - 1}")
         if entry.kind == "readings":
             journal.block(entry)
         prev, expected = entry.sha256, entry.seq + 1
@@ -359,12 +339,3 @@ def _identity(path: Path) -> tuple[int, int] | None:
     except OSError:
         return None
     return status.st_dev, status.st_ino
-
-
-def _damaged(path: Path, why: str) -> JournalDamaged:
-    return JournalDamaged(
-        "The journal is damaged",
-        where=str(path),
-        why=why,
-        mend="run evenarm records verify, keep the file as it is, and go back to a copy",
-    )

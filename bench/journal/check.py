@@ -12,10 +12,10 @@ from sqlalchemy import func, select
 from sqlalchemy.engine import Connection
 
 from bench.errors import JournalDamaged, printable
-from bench.journal.book import checked_entry
 from bench.journal.canonical import KIND, block_name, canonical_json, decode_block, number_text
 from bench.journal.model import GENESIS, Entry, Verification
 from bench.journal.place import refuse_unless_file
+from bench.journal.rows import checked_entry
 from bench.journal.schema import ABOUT, BLOCKS, DDL, ENTRIES, SCHEMA_VERSION
 from bench.journal.store import Store, refuse_unless_journal
 

@@ -132,18 +132,23 @@ def prepare(store: Store) -> None:
         objects = connection.exec_driver_sql("SELECT count(*) FROM sqlite_master").scalar()
     if objects:
         return
-    if store.pragma("journal_mode=WAL") != "wal":
-        raise JournalError(
-            "The journal's file system cannot keep a write-ahead log",
-            where=str(store.path),
-            mend="keep the journal on a local disk",
-        )
+    use_log(store)
     with store.writing() as connection:
         connection.exec_driver_sql(f"PRAGMA application_id={APPLICATION_ID}")
         for statement in DDL.values():
             connection.exec_driver_sql(statement)
         connection.exec_driver_sql(
             "INSERT INTO journal_schema (version, about) VALUES (?, ?)", (SCHEMA_VERSION, ABOUT)
+        )
+
+
+def use_log(store: Store) -> None:
+    """Switch the file to a write-ahead log, so that readers and the writer do not wait."""
+    if store.pragma("journal_mode=WAL") != "wal":
+        raise JournalError(
+            "The journal's file system cannot keep a write-ahead log",
+            where=str(store.path),
+            mend="keep the journal on a local disk",
         )
 
 
