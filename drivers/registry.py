@@ -26,6 +26,8 @@ GROUPS: dict[Kind, str] = {
 BUILT_IN: tuple[tuple[Kind, str, str], ...] = (
     ("stage", "simulated", "drivers.simulated.plugin:STAGE"),
     ("detector", "simulated", "drivers.simulated.plugin:DETECTOR"),
+    ("changer", "simulated", "drivers.simulated.plugin:CHANGER"),
+    ("climate", "simulated", "drivers.simulated.plugin:CLIMATE"),
 )
 
 

@@ -72,6 +72,7 @@ class SourceSpec:
     coherence_fwhm_m: float = float("nan")
     coherence_rule_m: float = float("nan")
     coherence_integral_m: float = float("nan")
+    described: Mapping[str, Any] = field(default_factory=dict)  # the spectrum as for_drivers has it
 
 
 @dataclass(frozen=True)
@@ -118,6 +119,8 @@ class BenchSpec:
     changer: Mapping[str, Any] | None
     records_url: str  # with any relative SQLite path made absolute from the bench's folder
     simulation: SimulationSpec | None
+    simulated: bool = False  # every device named here is a simulated one
+    world: Mapping[str, Any] = field(default_factory=dict)  # world.toml in SI numbers, checked
 
     @property
     def folder(self) -> Path:

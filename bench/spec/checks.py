@@ -1,0 +1,248 @@
+"""What has to hold between the keys of bench.toml: each check adds its problems to the list."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from bench.quantities import DIMENSIONS, dimension_of, show, show_length
+from bench.spec.model import SourceSpec
+from bench.spec.problems import Problems, nearest
+
+if TYPE_CHECKING:
+    from bench.spec import schema
+
+# Names that a later form of the file will use; what stands in their place now.
+RESERVED = {
+    "signal": "two outputs combined into one signal are reserved for later",
+    "reference": "a laser as ruler is reserved for later",
+    "mount": "mirror mounts are reserved for later",
+    "path_table": "a table from reading to path difference is reserved for later; use path_factor",
+}
+_ARRAYS = {
+    "stage": "more than one stage is reserved for later: write one [stage]",
+    "detector": "more than one detector is reserved for later: write one [detector]",
+}
+_KEYS = {
+    ("stage", "role"): "stages with roles are reserved for later",
+    ("detector", "port"): "detectors at named ports are reserved for later",
+    ("bench", "path_table"): RESERVED["path_table"],
+    ("stage", "path_table"): RESERVED["path_table"],
+}
+
+
+def is_reserved(name: str, value: object) -> bool:
+    """Whether this form of a known table is one that is reserved."""
+    return name in _ARRAYS and isinstance(value, list)
+
+
+def reserved(raw: dict[str, Any], problems: Problems) -> None:
+    """Say so of every reserved name, and take the reserved keys of known tables out of ``raw``."""
+    for name, value in raw.items():
+        if name in RESERVED:
+            problems.add(name, value, RESERVED[name])
+        elif is_reserved(name, value):
+            problems.add(name, value, _ARRAYS[name])
+    for (table, key), text in _KEYS.items():
+        inner = raw.get(table)
+        if isinstance(inner, dict) and key in inner:
+            problems.add(f"{table}.{key}", inner.pop(key), text)
+
+
+def path_factor(table: schema.Bench | None, raw: object, problems: Problems) -> float:
+    """The signed factor, from itself or from which arm moves; 1 where there is a problem.
+
+    OPD is arm A minus arm B, so it grows where A gets longer or B shorter.
+    """
+    if table is None or not isinstance(raw, Mapping):
+        return 1.0
+    worded = [key for key in ("moving_arm", "increasing", "folds") if key in raw]
+    field = type(table).model_fields["path_factor"].description or ""
+    if table.path_factor is not None:
+        if worded:
+            problems.add(
+                f"bench.{worded[0]}", raw[worded[0]], "path_factor says it already; keep one"
+            )
+        if table.path_factor == 0:
+            allowed = "must not be zero: the stage would not change the path difference"
+            problems.add("bench.path_factor", raw["path_factor"], f"{allowed}; {field}")
+            return 1.0
+        if abs(table.path_factor) > 100:
+            problems.add("bench.path_factor", raw["path_factor"], f"is far too large; {field}")
+        return table.path_factor
+    if not worded:
+        problems.missing("bench.path_factor", f"{field}; or moving_arm and increasing")
+        return 1.0
+    for key in ("moving_arm", "increasing"):
+        if key not in raw:
+            problems.missing(f"bench.{key}", str(type(table).model_fields[key].description))
+    longer = (table.moving_arm == "A") == (table.increasing == "longer")
+    return table.folds if longer else -table.folds
+
+
+def sources(built: Sequence[SourceSpec | None], has_changer: bool, problems: Problems) -> None:
+    """No name twice; with a changer, a position for each and none twice."""
+    seen: dict[str, int] = {}
+    positions: dict[str, int] = {}
+    for index, source in enumerate(built):
+        if source is None:
+            continue
+        if source.name in seen:
+            allowed = f"source[{seen[source.name]}] has that name already"
+            problems.add(f"source[{index}].name", source.name, allowed)
+        seen.setdefault(source.name, index)
+        if has_changer and source.position is None:
+            problems.missing(f"source[{index}].position", "where the changer has it, as text")
+        if source.position is not None and source.position in positions:
+            allowed = f"source[{positions[source.position]}] is there already"
+            problems.add(f"source[{index}].position", source.position, allowed)
+        elif source.position is not None:
+            positions[source.position] = index
+
+
+def signal_unit(
+    table: schema.Detector | None, tables: Sequence[schema.Source | None], problems: Problems
+) -> str:
+    """The SI unit of the detector's signal; every signal of the file must measure the same.
+
+    The first that is stated, of range, dark, noise and the sources in that order, decides.
+    """
+    stated: list[tuple[str, Any]] = []
+    if table is not None:
+        if table.range is not None:
+            stated += [(f"detector.range[{end}]", table.range[end]) for end in (0, 1)]
+        stated += [(f"detector.{key}", getattr(table, key)) for key in ("dark", "noise")]
+    stated += [
+        (f"source[{index}].signal", source.signal)
+        for index, source in enumerate(tables)
+        if source is not None
+    ]
+    first: tuple[str, str] | None = None
+    for path, quantity in stated:
+        if quantity is None:
+            continue
+        dimension = dimension_of(quantity.unit)
+        if first is None:
+            first = (path, dimension)
+        elif dimension != first[1]:
+            problems.add(
+                path, str(quantity), f"must be a {first[1]} like {first[0]}, not a {dimension}"
+            )
+    return DIMENSIONS[first[1] if first is not None else "voltage"][1]
+
+
+def stage_and_expect(tables: Mapping[str, Any], raw: Mapping[str, Any], problems: Problems) -> None:
+    """Moves fit into the travel, and the zero is expected within it."""
+    stage: schema.Stage | None = tables.get("stage")
+    table: schema.Expect | None = tables.get("expect")
+    if table is not None:
+        uncertain = bool(table.zero.standard_uncertainty)
+        if table.half_width is not None and table.standard_uncertainty is not None:
+            problems.add(
+                "expect.standard_uncertainty",
+                raw["expect"]["standard_uncertainty"],
+                "half_width says it already; keep one",
+            )
+        elif (table.half_width, table.standard_uncertainty) == (None, None) and not uncertain:
+            problems.missing("expect.half_width", "half_width or standard_uncertainty")
+    if stage is None or stage.travel is None:
+        return
+    low, high = stage.travel
+    limits = f"{show_length(low)} to {show_length(high)}"
+    for key in ("longest_move", "reversal_allowance", "resolution"):
+        value = getattr(stage, key)
+        if value is not None and value > high - low:
+            allowed = f"must fit into the travel, {limits}"
+            problems.add(f"stage.{key}", raw["stage"].get(key, show_length(value)), allowed)
+    if table is None:
+        return
+    half = table.half_width or 0.0
+    slack = 1e-9 * (high - low)
+    if not (low - slack <= table.zero.si - half and table.zero.si + half <= high + slack):
+        reach = f"{show_length(table.zero.si - half)} to {show_length(table.zero.si + half)}"
+        problems.add(
+            "expect.zero",
+            raw["expect"]["zero"],
+            f"{reach} is not within [stage] travel, {limits}",
+        )
+
+
+def detector(table: schema.Detector | None, raw: Mapping[str, Any], problems: Problems) -> None:
+    """A reading ends before the next begins; dark and noise are possible within the range."""
+    if table is None:
+        return
+    if table.integration is not None and table.integration * table.rate > 1 + 1e-9:
+        longest = show(1e3 / table.rate, None, "ms")
+        problems.add(
+            "detector.integration",
+            raw["detector"]["integration"],
+            f"must be at most one over the rate, {longest}",
+        )
+    if table.range is None:
+        return
+    low, high = (end.si for end in table.range)
+    if table.dark is not None and not low <= table.dark.si <= high:
+        problems.add("detector.dark", raw["detector"]["dark"], "must be within range")
+    if table.noise is not None and table.noise.si >= high - low:
+        problems.add("detector.noise", raw["detector"]["noise"], "must be smaller than the range")
+
+
+def glass(
+    tables: Mapping[str, Any], built: Sequence[SourceSpec | None], problems: Problems
+) -> str | None:
+    """The material's name as the catalogue writes it, where its index is known for every source."""
+    table: schema.Glass | None = tables.get("glass")
+    if table is None:
+        return None
+    from bench.optics import glass as catalogue
+
+    try:
+        name = catalogue.material(table.material).name
+    except ValueError:
+        known = list(catalogue.MATERIALS)
+        allowed = f"is not known; known: {', '.join(known)}"
+        problems.add("glass.material", table.material, allowed, nearest(table.material, known))
+        return None
+    bench: schema.Bench | None = tables.get("bench")
+    wanted = [("bench.reference_wavelength", bench.reference_wavelength if bench else None)]
+    wanted += [
+        (f"source[{index}].spectrum", 1.0 / edge)
+        for index, source in enumerate(built)
+        if source is not None
+        for edge in source.band
+    ]
+    for path, wavelength_m in wanted:
+        if wavelength_m is None:
+            continue
+        try:
+            catalogue.index(name, wavelength_m)
+        except ValueError as error:
+            problems.add(path, show_length(wavelength_m), str(error))
+    return name
+
+
+def records_url(
+    table: schema.Records | None, folder: Path, records_folder: Path | None, problems: Problems
+) -> str:
+    """Where the journal is, a relative SQLite file counted from ``folder``."""
+    if records_folder is not None:
+        return f"sqlite:///{records_folder.absolute() / 'journal.sqlite3'}"
+    if table is None:
+        return ""
+    scheme, mark, rest = table.url.partition("://")
+    if not mark or scheme.split("+")[0] not in {"sqlite", "postgresql"}:
+        allowed = 'must be like "sqlite:///logs/journal.sqlite3"'
+        problems.add("records.url", table.url, allowed)
+        return ""
+    if not scheme.startswith("sqlite"):
+        return table.url
+    name = rest.removeprefix("/")
+    if not rest.startswith("/") or not name or ":memory:" in name or "?" in name:
+        problems.add(
+            "records.url",
+            table.url,
+            'records are kept in a file: "sqlite:///" and a file name relative to bench.toml',
+        )
+        return ""
+    return f"{scheme}:///{folder / name}"

@@ -1,0 +1,121 @@
+"""Faults of a file, gathered while it is checked: each with its path, value and nearest key."""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any, TypeVar
+
+from bench.errors import Problem
+
+if TYPE_CHECKING:
+    from bench.spec.schema import Table
+
+T = TypeVar("T", bound="Table")
+
+__all__ = ["Problems", "nearest", "written"]
+
+
+def nearest(word: str, known: Iterable[str]) -> str:
+    """The known word most like ``word``, or ``""``."""
+    folded = {name.casefold(): name for name in known}
+    near = difflib.get_close_matches(word.casefold(), folded, 1, 0.55)
+    return folded[near[0]] if near else ""
+
+
+def written(value: object) -> str:
+    """A value of a TOML file as the file writes it, near enough to be recognised."""
+    if isinstance(value, str):
+        return f'"{value}"'
+    if isinstance(value, bool):
+        return str(value).lower()
+    if isinstance(value, list):
+        return f"[{', '.join(written(item) for item in value[:4])}]"
+    if isinstance(value, Mapping):
+        rows = [f"{key} = {written(item)}" for key, item in list(value.items())[:4]]
+        return f"{{ {', '.join(rows)} }}"
+    return str(value)
+
+
+@dataclass
+class Problems:
+    """The list, with the ways in which problems come about."""
+
+    found: list[Problem] = field(default_factory=list)
+
+    def add(self, path: str, value: object, allowed: str, near: str = "") -> None:
+        self.found.append(Problem(path, written(value), allowed, near))
+
+    def missing(self, path: str, allowed: str) -> None:
+        self.found.append(Problem(path, "(missing)", f"required: {allowed}"))
+
+    def unknown_key(self, path: str, value: object, key: str, known: Iterable[str]) -> None:
+        known = list(known)
+        near = nearest(key, known)
+        allowed = "no such key" if near or not known else f"no such key; known: {', '.join(known)}"
+        self.add(path, value, allowed, near)
+
+    def table(self, model: type[T], raw: object, path: str) -> T | None:
+        """``raw`` as a table of that kind; None, and problems added, where it is not one."""
+        from pydantic import ValidationError
+
+        if not isinstance(raw, dict):
+            self.add(path, raw, f"must be a table [{path}]")
+            return None
+        try:
+            return model.model_validate(raw)
+        except ValidationError as error:
+            for row in error.errors(include_url=False, include_context=False):
+                self._pydantic(model, path, dict(row))
+            return None
+
+    def _pydantic(self, model: type[Table], path: str, row: dict[str, Any]) -> None:
+        location = [part for part in row["loc"] if not _of_a_union(part)]
+        full = path
+        fields = model.model_fields
+        description = ""
+        for depth, part in enumerate(location):
+            full += f"[{part}]" if isinstance(part, int) else f".{part}"
+            if isinstance(part, str) and part in fields:
+                description = fields[part].description or ""
+                inner = _table_of(fields[part].annotation)
+                if inner is not None and depth + 1 < len(location):
+                    fields = inner.model_fields
+        key = str(location[-1]) if location else ""
+        kind = row["type"]
+        if kind == "extra_forbidden":
+            self.unknown_key(full, row["input"], key, fields)
+        elif kind == "missing":
+            self.missing(full, description)
+        elif kind == "evenarm":
+            self.add(full, row["input"], row["msg"])
+        elif kind == "literal_error":
+            choices = [part.strip(' "') for part in description.replace(" or ", ",").split(",")]
+            near = nearest(str(row["input"]), choices)
+            self.add(full, row["input"], f"must be {description}", near)
+        else:
+            self.add(full, row["input"], f"{_plain(row)}; {description}".rstrip("; "))
+
+
+def _plain(row: dict[str, Any]) -> str:
+    """pydantic's message without its terms for types."""
+    if row["type"] == "finite_number":
+        return "must be a finite number"
+    if row["type"] == "tuple_type":
+        return "must be a pair in square brackets"
+    return str(row["msg"]).replace("Input should be", "must be").replace("String", "text")
+
+
+def _of_a_union(part: object) -> bool:
+    """Parts of a location that name a branch of a union rather than a key."""
+    return isinstance(part, str) and ("[" in part or part in {"float", "str", "int", "bool"})
+
+
+def _table_of(annotation: object) -> type[Table] | None:
+    from bench.spec.schema import Table
+
+    for candidate in (annotation, *getattr(annotation, "__args__", ())):
+        if isinstance(candidate, type) and issubclass(candidate, Table):
+            return candidate
+    return None
