@@ -1,10 +1,10 @@
 """Is there a packet, and roughly where: the decision before the fit.
 
-With a band known the readings are correlated with a packet of that band at every place. The energy
-of the correlation over the scan is its own yardstick: in noise, hum or a laser's endless fringes the
-largest energy stays within a factor of the usual one that grows only with the logarithm of the
-number of independent places. A packet is an energy that leaves this behaviour behind, and that many
-readings carry.
+With a band known the readings are correlated with a packet of that band at every place. The
+energy of the correlation over the scan is its own yardstick: in noise, hum or a laser's endless
+fringes the largest energy stays within a factor of the usual one that grows only with the logarithm
+of the number of independent places. A packet is an energy that leaves this behaviour behind, and
+that many readings carry.
 
 Without a band, short spectra of several lengths along the scan are searched for an energy that is
 localised both in place and in frequency; its band is then measured and used as if it were known.
@@ -65,11 +65,11 @@ def chance(excess: float, places: float, floor: float) -> float:
 def search_band(
     x: FloatArray, signal: FloatArray, low: float, high: float, stretch: float = 1.0
 ) -> Candidate:
-    """Correlate with a packet of the half-power band (low, high); ``x`` rising, slow level removed."""
+    """Correlate with a packet of the half-power band (low, high); ``x`` rising."""
     carrier = 0.5 * (low + high)
     width = ENVELOPE_FWHM / (high - low) * stretch
     width = min(width, 0.7 * float(x[-1] - x[0]))
-    grid, z, weight, weight2 = demodulate(x, signal, carrier, width)
+    grid, z, weight2 = demodulate(x, signal, carrier, width)
     # A Gaussian of full width w, correlated with itself, is independent after about w.
     full = weight2 > 0.25 * np.median(weight2)
     energy = np.where(full, np.abs(z) ** 2 / np.maximum(weight2, 1e-9), 0.0)
@@ -91,7 +91,7 @@ def search_band(
 
 
 def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
-    """Find the place and the band where energy is localised; ``x`` rising. None: nothing stands out.
+    """Find where energy is localised in place and frequency; ``x`` rising, None where nowhere.
 
     The readings are put on an even grid for this search only. The energy in each tile of place and
     frequency is weighted by frequency squared, which makes the slow wandering of lamps and

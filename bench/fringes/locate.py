@@ -2,19 +2,40 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from bench.fringes import results
-from bench.fringes.detect import ACCEPT, ENVELOPE_FWHM, Candidate, search_band, search_blind
-from bench.fringes.honesty import noise_shares
-from bench.fringes.model import FloatArray, Knowledge, Located, Notice, Scan
+from bench.fringes.detect import (
+    ENVELOPE_FWHM,
+    Candidate,
+    search_band,
+    search_blind,
+)
+from bench.fringes.dispersion import Dispersion, of_glass, second_order
+from bench.fringes.honesty import covariance, noise_shares
+from bench.fringes.model import (
+    BoolArray,
+    Estimate,
+    FloatArray,
+    FringeZero,
+    Knowledge,
+    Located,
+    Notice,
+    Scan,
+)
+from bench.fringes.notices import at_the_edge, notices_of
+from bench.fringes.results import Solution
 from bench.fringes.trend import flat_tops, lone_spikes, robust_spread, slow_level
+from bench.fringes.verdict import EVERYWHERE, judge
 from bench.fringes.window import Window, settle
-from bench.fringes.zero import PacketFit, Shape, fit_packet, square_law
+from bench.fringes.zero import PacketFit, fit_packet
 
 LEAST_READINGS = 24
-BEND_PRIOR_RAD = 6.0
-EVERYWHERE = "fringes everywhere, no packet"
+BEND_PRIOR = 6.0  # standard deviation of a prior on dispersion: 3 rad at the rms half-width
+ROUNDS = 3
+OUTLIER = 6.0
 
 
 def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
@@ -25,28 +46,10 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     mains do. Raises ValueError for arrays of different or wrong shape or with values not finite.
     """
     known = knowledge if knowledge is not None else Knowledge()
-    x, signal = np.asarray(scan.x, dtype=np.float64), np.asarray(scan.signal, dtype=np.float64)
-    if x.ndim != 1 or x.shape != signal.shape:
-        raise ValueError(f"positions {x.shape} and signals {signal.shape} must be one row each")
-    if not (bool(np.all(np.isfinite(x))) and bool(np.all(np.isfinite(signal)))):
-        raise ValueError("positions and signals must be finite")
-    order = np.argsort(x, kind="stable")
-    x, signal = x[order], signal[order]
-    notices: list[Notice] = []
-    clipped = flat_tops(signal)
-    if scan.saturated is not None:
-        clipped = clipped | np.asarray(scan.saturated, dtype=bool)[order]
-    spikes = lone_spikes(signal) & ~clipped
-    if bool(clipped.any()):
-        notices.append(Notice("saturated", f"{int(clipped.sum())} clipped readings were left out"))
-    if bool(spikes.any()):
-        notices.append(Notice("outliers", f"{int(spikes.sum())} lone spikes were left out"))
-    keep = ~(clipped | spikes)
-    x, signal = x[keep], signal[keep]
+    x, signal, notices = _usable(scan)
     if x.size < LEAST_READINGS or x[-1] <= x[0]:
-        return _refused(
-            f"only {x.size} usable readings; at least {LEAST_READINGS} are needed", notices
-        )
+        reason = f"only {x.size} usable readings; at least {LEAST_READINGS} are needed"
+        return Located(found=False, reason=reason, notices=tuple(notices))
     # Positions in spans of the scan about its middle: sums of squares stay well scaled.
     middle, span = 0.5 * float(x[0] + x[-1]), float(x[-1] - x[0])
     u = (x - middle) / span
@@ -54,20 +57,41 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     band = None
     if known.band is not None and per_m is not None:
         band = (known.band[0] * per_m, known.band[1] * per_m)
-    candidate, flattened = _candidate(u, signal, band)
+    candidate, flat = _candidate(u, signal, band)
     if candidate is None:
-        return _refused("nothing rises above the noise like a packet", notices)
-    window = settle(u, flattened, candidate, band_known=band is not None)
-    verdict = _verdict(u, flattened, candidate, window)
-    if verdict or window is None:
-        reason = verdict or "too few readings on the packet"
-        if reason.startswith(EVERYWHERE):
-            notices.append(Notice("monochromatic", EVERYWHERE))
-        return _refused(reason, notices, candidate, flattened)
-    fit = _fit(u, signal, window, known, per_m, float(np.sign(scan.opd_per_x or 1.0)))
-    return results.build(
-        scan, known, u, signal, window, fit, candidate, notices, middle=middle, span=span
-    )
+        return _refused("nothing rises above the noise like a packet", 1.0, notices, flat)
+    window = settle(u, flat, candidate, band_known=band is not None)
+    reason, false_alarm = judge(u, flat, candidate, window)
+    if reason or window is None:
+        if reason == EVERYWHERE:
+            notices.append(Notice("monochromatic", reason))
+        weakest = _weakest_contrast(candidate, signal, scan.dark)
+        return _refused(reason, false_alarm, notices, flat, weakest)
+    solution = _solve(u, signal, window, known, per_m)
+    return _result(scan, known, u, signal, window, solution, false_alarm, notices, middle, span)
+
+
+def _usable(scan: Scan) -> tuple[FloatArray, FloatArray, list[Notice]]:
+    """Readings in the order of position without clipped ones and lone spikes."""
+    x, signal = np.asarray(scan.x, dtype=np.float64), np.asarray(scan.signal, dtype=np.float64)
+    if x.ndim != 1 or x.shape != signal.shape:
+        raise ValueError(f"positions {x.shape} and signals {signal.shape} must be one row each")
+    if not (bool(np.all(np.isfinite(x))) and bool(np.all(np.isfinite(signal)))):
+        raise ValueError("positions and signals must be finite")
+    order = np.argsort(x, kind="stable")
+    x, signal = x[order], signal[order]
+    clipped: BoolArray = flat_tops(signal)
+    if scan.saturated is not None:
+        clipped = clipped | np.asarray(scan.saturated, dtype=bool)[order]
+    spikes = lone_spikes(signal) & ~clipped
+    notices = []
+    if bool(clipped.any()):
+        text = f"{int(clipped.sum())} clipped readings were left out"
+        notices.append(Notice("saturated", text))
+    if bool(spikes.any()):
+        notices.append(Notice("outliers", f"{int(spikes.sum())} lone spikes were left out"))
+    keep = ~(clipped | spikes)
+    return x[keep], signal[keep], notices
 
 
 def _candidate(
@@ -81,91 +105,157 @@ def _candidate(
     return min(tries, key=lambda found: (found.false_alarm, -found.excess)), flat
 
 
-def _verdict(u: FloatArray, flat: FloatArray, candidate: Candidate, window: Window | None) -> str:
-    """Why this is no packet; empty where it is one."""
-    if window is None:
-        return "too few readings on the packet"
-    part = flat[window.first : window.stop]
+def _dispersion(
+    known: Knowledge, reference: float, scale: float, per_m: float | None
+) -> Dispersion:
+    if known.glass is not None and per_m is not None:
+        return of_glass(known.glass, reference, scale, per_m)
+    return second_order(reference, scale, per_m)
+
+
+def _first_guesses(
+    window: Window, dispersion: Dispersion, reference: float
+) -> list[tuple[float, float]]:
+    """(shift, bend): from the envelope's maximum, and from the spectrum's phase."""
     fit = window.fit
-    unknowns = 2 * fit.frequency.size
-    left = float(np.sum(fit.residual**2))
-    level_only = float(np.sum((part - fit.level) ** 2))
-    explained = max(level_only - left, 0.0) / unknowns
-    unexplained = left / max(1, fit.freedom)
-    strength = explained / max(unexplained, 1e-300)
-    few_places = candidate.places < 12.0
-    if strength < 1.0 + 6.0 * np.sqrt(2.0 / unknowns):
-        return "nothing rises above the noise like a packet"
-    ends = envelope_at_ends(u, window)
-    if candidate.false_alarm > ACCEPT and not few_places:
-        return EVERYWHERE
-    if min(ends) > 0.6:
-        return EVERYWHERE
-    return ""
+    peak = window.peak - fit.origin
+    guesses = [(peak, 0.0)]
+    turned = fit.c * np.exp(2j * np.pi * fit.frequency * peak)
+    phase = np.unwrap(np.angle(turned))
+    away = fit.frequency - reference
+    columns = np.stack([np.ones_like(away), away, dispersion.curve(fit.frequency)], axis=1)
+    size = np.abs(fit.c)[:, None]
+    solved, *_ = np.linalg.lstsq(columns * size, phase * size[:, 0], rcond=1e-9)
+    guesses.append((peak - float(solved[1]) / (2.0 * math.pi), float(solved[2])))
+    return guesses
 
 
-def envelope_at_ends(u: FloatArray, window: Window) -> tuple[float, float]:
-    """The envelope at both ends of the window over its maximum."""
-    from bench.fringes.zero import envelope_of
-
-    fit = window.fit
-    inside = u[window.first : window.stop] - fit.origin
-    fine = np.linspace(inside[0], inside[-1], 8 * fit.frequency.size + 1)
-    size = np.abs(envelope_of(fit, fine))
-    edge = max(2, size.size // 12)
-    top = max(float(size.max()), 1e-300)
-    return float(size[:edge].mean()) / top, float(size[-edge:].mean()) / top
-
-
-def _fit(
-    u: FloatArray,
-    signal: FloatArray,
-    window: Window,
-    known: Knowledge,
-    per_m: float | None,
-    sign: float,
-) -> PacketFit:
-    """The nonlinear fit, twice: with equal weights, then with those that its residuals ask for."""
+def _solve(
+    u: FloatArray, signal: FloatArray, window: Window, known: Knowledge, per_m: float | None
+) -> Solution:
+    """The nonlinear fit, repeated with the weights that its own residuals ask for."""
     part, values = u[window.first : window.stop], signal[window.first : window.stop]
     start = window.fit
     power = np.abs(start.c) ** 2
-    mean = float(np.sum(np.abs(start.c) * start.frequency) / np.sum(np.abs(start.c)))
-    reference = mean
+    reference = float(np.sum(np.sqrt(power) * start.frequency) / np.sum(np.sqrt(power)))
+    rms = math.sqrt(float(np.sum(power * (start.frequency - reference) ** 2) / np.sum(power)))
+    scale = max(rms, 1e-3 * reference)
+    stated = known.at_wavelength_m is not None and per_m is not None
     if known.at_wavelength_m is not None and per_m is not None:
         reference = per_m / known.at_wavelength_m
-    spread = float(np.sqrt(np.sum(power * (start.frequency - mean) ** 2) / np.sum(power)))
-    spread = max(spread, 1e-3 * mean)
-    shape: Shape = square_law(spread)
     weight = np.ones(part.size)
-    fit: PacketFit | None = None
-    for _ in range(3):
-        origins = [(window.peak - start.origin, 0.0)] if fit is None else [(fit.shift, fit.bend)]
-        fit = min(
-            (
-                fit_packet(part, values, weight, start, reference, shape, BEND_PRIOR_RAD, *origin)
-                for origin in origins
-            ),
-            key=lambda done: float(np.sum(weight * done.residual**2)),
-        )
+    guesses: list[tuple[float, float]] = []
+    for turn in range(ROUNDS):
+        dispersion = _dispersion(known, reference, scale, per_m)
+        if turn == 0:
+            guesses = _first_guesses(window, dispersion, reference)
+        fits = [
+            fit_packet(part, values, weight, start, reference, dispersion, BEND_PRIOR, guess)
+            for guess in guesses
+        ]
+        fit = min(fits, key=lambda done: _cost(done, weight))
         shares = noise_shares(fit.residual, fit.leverage, fit.slope, fit.fringes)
         variance = shares.variance(fit.slope, fit.fringes)
-        weight = 1.0 / np.maximum(variance, 1e-3 * float(np.mean(variance)))
+        variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
+        far = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
+        weight = np.where(far, 1e-6, 1.0) / variance
         weight = weight / float(np.mean(weight))
-    assert fit is not None
-    return fit
+        solution = Solution(fit, covariance(fit, variance), shares)
+        mean, _ = solution.mean_frequency()
+        guesses = [(fit.shift, fit.bend)]
+        if not stated:
+            reference = mean
+    return solution
+
+
+def _cost(fit: PacketFit, weight: FloatArray) -> float:
+    return float(np.sum(weight * fit.residual**2)) / (1.0 if fit.converged else 0.8)
+
+
+def _result(
+    scan: Scan,
+    known: Knowledge,
+    u: FloatArray,
+    signal: FloatArray,
+    window: Window,
+    solution: Solution,
+    false_alarm: float,
+    notices: list[Notice],
+    middle: float,
+    span: float,
+) -> Located:
+    fit = solution.fit
+    part = u[window.first : window.stop]
+    inside = part - fit.origin
+    stated = known.at_wavelength_m is not None and scan.opd_per_x is not None
+    zero = results.group_zero(solution, stated=stated)
+    zero, cut = at_the_edge(u, window, fit, zero)
+    notices += cut
+    fringe = results.fringe_zero(solution, zero)
+    amplitude = results.peak_amplitude(solution, float(inside[0]), float(inside[-1]))
+    level = float(np.interp(zero.value, inside, fit.level))
+    contrast = results.contrast(solution, zero.value, level, scan.dark)
+    notices += notices_of(u, signal, window, solution, amplitude, contrast)
+    per_m = abs(scan.opd_per_x) * span if scan.opd_per_x else None
+    relative = scan.opd_per_x_relative_uncertainty
+    mean_wavelength = coherence = glass = at = None
+    if per_m is None:
+        text = "what one unit of the axis is worth in OPD is not known: no wavelengths, no lengths"
+        notices.append(Notice("no-length", text))
+    else:
+        mean_wavelength = results.mean_wavelength(solution, per_m, relative)
+        coherence = results.coherence(solution, per_m, relative)
+        glass = results.residual_glass(solution, math.copysign(1.0, scan.opd_per_x or 1.0))
+        at = mean_wavelength
+        if known.at_wavelength_m is not None:
+            at = Estimate(known.at_wavelength_m, 0.0)
+    return Located(
+        found=True,
+        zero=_on_axis(zero, fit.origin, middle, span),
+        at_wavelength_m=at,
+        fringe_zero=None
+        if fringe is None
+        else FringeZero(
+            _on_axis(fringe.x, fit.origin, middle, span), fringe.kind, fringe.probability
+        ),
+        contrast=contrast,
+        amplitude=amplitude,
+        mean_wavelength_m=mean_wavelength,
+        coherence=coherence,
+        residual_glass=glass,
+        noise=math.sqrt(float(np.sum(fit.residual**2)) / max(1, fit.freedom)),
+        degrees_of_freedom=float(fit.freedom),
+        false_alarm_probability=false_alarm,
+        notices=tuple(notices),
+        picture=results.picture(fit, inside, middle, span),
+    )
+
+
+def _on_axis(estimate: Estimate, origin: float, middle: float, span: float) -> Estimate:
+    return Estimate(middle + span * (origin + estimate.value), span * estimate.standard_uncertainty)
+
+
+def _weakest_contrast(candidate: Candidate, signal: FloatArray, dark: float | None) -> float | None:
+    """Contrast that would have been found at this place nine times in ten; None without a dark."""
+    level = float(np.median(signal))
+    if dark is None or level <= dark or not math.isfinite(candidate.usual_amplitude):
+        return None
+    needed = math.sqrt(math.log(4.0 * candidate.places / 1e-3)) + 1.3
+    return candidate.usual_amplitude * needed / (level - dark)
 
 
 def _refused(
     reason: str,
+    false_alarm: float,
     notices: list[Notice],
-    candidate: Candidate | None = None,
-    flat: FloatArray | None = None,
+    flat: FloatArray,
+    weakest: float | None = None,
 ) -> Located:
-    noise = robust_spread(flat) if flat is not None else float("nan")
     return Located(
         found=False,
         reason=reason,
-        noise=noise,
-        false_alarm_probability=candidate.false_alarm if candidate is not None else 1.0,
+        noise=robust_spread(flat),
+        false_alarm_probability=false_alarm,
+        weakest_contrast=weakest,
         notices=tuple(notices),
     )

@@ -13,7 +13,7 @@ BoolArray = NDArray[np.bool_]
 
 @dataclass(frozen=True)
 class Estimate:
-    """A number with its standard uncertainty; the unit is in the name of the field that holds it."""
+    """A number with its standard uncertainty; its unit is in the name of the field."""
 
     value: float
     standard_uncertainty: float
@@ -23,8 +23,8 @@ class Estimate:
 class Scan:
     """One pass over the packet.
 
-    ``x`` and ``signal`` have shape (n,), are finite, in any order and spacing. ``x`` is whatever the
-    scan's axis is (stage reading in metres, OPD in metres, counts). ``opd_per_x`` is the signed
+    ``x`` and ``signal`` have shape (n,), are finite, in any order and spacing. ``x`` is whatever
+    the scan's axis is (stage reading in metres, OPD in metres, counts). ``opd_per_x`` is the signed
     change of OPD in metres for one unit of ``x``; None where it is not known, and then everything
     that needs a length is left out of the result. ``saturated`` marks clipped readings, ``dark`` is
     the signal without light.
@@ -103,9 +103,10 @@ class Envelope:
 class Located:
     """What a scan says of the zero.
 
-    With ``found`` false only ``reason``, ``noise``, ``false_alarm_probability``, ``weakest_contrast``
-    and ``notices`` mean anything. ``zero`` and ``fringe_zero`` are in the scan's own axis.
-    ``amplitude`` (half peak to peak at the packet's maximum) and ``noise`` are in the signal's unit.
+    With ``found`` false only ``reason``, ``noise``, ``false_alarm_probability``,
+    ``weakest_contrast`` and ``notices`` mean anything. ``zero`` and ``fringe_zero`` are in the
+    scan's own axis. ``amplitude`` (half peak to peak at the packet's maximum) and ``noise`` are in
+    the signal's unit.
     """
 
     found: bool

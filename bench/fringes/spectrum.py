@@ -1,7 +1,7 @@
 """Fourier sums over uneven positions, and the bases of band-limited fits.
 
-A band is evaluated at its true frequencies, in cycles for one unit of ``x``, whatever the spacing of
-the readings is: that is why a known band makes a scan with fewer than two readings a fringe usable.
+A band is evaluated at its true frequencies, in cycles for one unit of ``x``, whatever the spacing
+of the readings is: a known band makes a scan with fewer than two readings a fringe usable.
 """
 
 from __future__ import annotations
@@ -35,7 +35,7 @@ def band_grid(low: float, high: float, period: float) -> FloatArray:
 
 
 def harmonics(x: FloatArray, frequency: FloatArray) -> FloatArray:
-    """Columns cos(2 pi f x) and -sin(2 pi f x), shape (n, 2k), so that c = a + ib fits Re(c e^{i.})."""
+    """Columns cos(2 pi f x) and -sin(2 pi f x), shape (n, 2k): (a, b) fits Re((a + ib) e^{i..})."""
     phase = 2.0 * np.pi * np.outer(x, frequency)
     return np.hstack([np.cos(phase), -np.sin(phase)])
 
@@ -49,11 +49,11 @@ def polynomial(x: FloatArray, order: int) -> FloatArray:
 
 def demodulate(
     x: FloatArray, values: FloatArray, carrier: float, width: float, per_width: int = 8
-) -> tuple[FloatArray, ComplexArray, FloatArray, FloatArray]:
+) -> tuple[FloatArray, ComplexArray, FloatArray]:
     """Slide a Gaussian of full width at half maximum ``width`` along a carrier.
 
     ``x`` rising, shape (n,). Returns positions (m,), the correlation z = sum y W exp(-2 pi i f x)
-    (m,), and the sums of W and of W squared over the readings (m,). Readings meet the carrier at
+    (m,), and the sum of W squared over the readings (m,). Readings meet the carrier at
     their true positions; only the kernel is sampled, ``per_width`` times a width.
     """
     step = width / per_width
@@ -72,17 +72,14 @@ def demodulate(
     kernel = np.exp(-4.0 * np.log(2.0) * offsets**2)
     pad = 2 * per_width
 
-    def slide(cells: NDArray[np.generic], taps: FloatArray) -> NDArray[np.generic]:
-        return np.convolve(cells, taps)[pad : pad + count]
+    def slide(cells: FloatArray, taps: FloatArray) -> FloatArray:
+        return np.asarray(np.convolve(cells, taps)[pad : pad + count], dtype=np.float64)
 
-    z = slide(spread(turned.real) + 1j * spread(turned.imag), kernel)
-    readings = spread(np.ones_like(values))
-    weight = slide(readings, kernel)
-    weight2 = slide(readings, kernel**2)
+    z = slide(spread(turned.real), kernel) + 1j * slide(spread(turned.imag), kernel)
+    weight2 = slide(spread(np.ones_like(values)), kernel**2)
     grid = x[0] + step * np.arange(count)
     return (
         np.asarray(grid, dtype=np.float64),
         np.asarray(z, dtype=np.complex128),
-        np.asarray(weight, dtype=np.float64),
-        np.asarray(weight2, dtype=np.float64),
+        weight2,
     )

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 
 from bench.fringes.model import BoolArray, FloatArray
@@ -26,7 +28,7 @@ def slow_level(x: FloatArray, signal: FloatArray, length: float, least: int = 9)
     cell = np.minimum(((x - x[0]) / span * count).astype(np.int64), count - 1)
     edges = np.searchsorted(cell, np.arange(count + 1))
     centres, levels = [], []
-    for start, stop in zip(edges[:-1], edges[1:], strict=True):
+    for start, stop in itertools.pairwise(edges):
         if stop - start >= 3:
             centres.append(float(np.mean(x[start:stop])))
             levels.append(float(np.median(signal[start:stop])))

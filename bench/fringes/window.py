@@ -63,9 +63,8 @@ def settle(
         width = ENVELOPE_FWHM / size
     else:
         width = candidate.width
-        low, high = candidate.low, candidate.high
-        middle = 0.5 * (low + high)
-        low, high = max(0.3 * middle, 1.2 / width), 2.0 * middle
+        middle = 0.5 * (candidate.low + candidate.high)
+        low, high = _around(middle, 5.0 / width)
     centre = candidate.x
     result: Window | None = None
     for turn in range(5):
@@ -87,9 +86,15 @@ def settle(
         moved = abs(peak) > 0.25 * seen
         resized = not 0.7 < seen / width < 1.4
         if not band_known:
-            narrower = measured_band(fit)
-            resized = resized or narrower[0] > low * 1.05 or narrower[1] < high * 0.95
-            low, high = narrower
+            seen_low, seen_high = measured_band(fit)
+            step = float(frequency[1] - frequency[0])
+            open_ended = seen_low <= frequency[0] or seen_high >= frequency[-1]
+            resized = resized or open_ended or seen_low > low + step or seen_high < high - step
+            if open_ended:
+                seen_low, seen_high = _around(
+                    0.5 * (seen_low + seen_high), 1.0 * (seen_high - seen_low)
+                )
+            low, high = seen_low, seen_high
         if not (moved or resized) and turn > 0:
             break
         centre += peak
@@ -97,6 +102,11 @@ def settle(
         if band_known:
             width = max(width, ENVELOPE_FWHM / (2.5 * (candidate.high - candidate.low)))
     return result
+
+
+def _around(middle: float, half: float) -> tuple[float, float]:
+    """A band about ``middle`` that stays clear of the slow level."""
+    return max(0.3 * middle, middle - half), min(2.5 * middle, middle + half)
 
 
 def measured_band(fit: LinearFit, share: float = 0.02) -> tuple[float, float]:

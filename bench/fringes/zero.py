@@ -13,25 +13,15 @@ Fundamentals of Statistical Signal Processing, ch. 7, from memory).
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
+from bench.fringes.dispersion import Dispersion
 from bench.fringes.model import FloatArray
 from bench.fringes.spectrum import ComplexArray, harmonics, polynomial
 
-Shape = Callable[[FloatArray, float], FloatArray]
 TREND_ORDER = 2
-
-
-def square_law(scale: float) -> Shape:
-    """Second-order dispersion: half the square of (f - f_r) / scale."""
-
-    def shape(frequency: FloatArray, reference: float) -> FloatArray:
-        return np.asarray(0.5 * ((frequency - reference) / scale) ** 2, dtype=np.float64)
-
-    return shape
 
 
 @dataclass(frozen=True)
@@ -90,7 +80,7 @@ class PacketFit:
     phase: float
     shift: float
     bend: float
-    shape: Shape
+    dispersion: Dispersion
     level: FloatArray
     fringes: FloatArray
     slope: FloatArray
@@ -106,7 +96,7 @@ class PacketFit:
         return np.asarray(
             self.phase
             - 2.0 * np.pi * away * self.shift
-            + self.bend * self.shape(frequency, self.reference),
+            + self.bend * self.dispersion.curve(frequency),
             dtype=np.float64,
         )
 
@@ -122,13 +112,12 @@ def fit_packet(
     weight: FloatArray,
     start: LinearFit,
     reference: float,
-    shape: Shape,
+    dispersion: Dispersion,
     bend_prior: float,
-    shift: float,
-    bend: float = 0.0,
+    guess: tuple[float, float],
     rounds: int = 25,
 ) -> PacketFit:
-    """Damped Gauss-Newton from a linear fit; ``shift`` is the first guess about its origin.
+    """Damped Gauss-Newton from a linear fit; ``guess`` is of shift and bend.
 
     ``bend_prior`` is the standard deviation, in units of ``bend``, of a weak prior that keeps a
     dispersion without evidence near zero.
@@ -139,12 +128,13 @@ def fit_packet(
     p = levels.shape[1]
     root = np.sqrt(weight)
     carrier = 2.0 * np.pi * np.outer(u, f)
-    curve = shape(f, reference)
+    curve = dispersion.curve(f)
     away = -2.0 * np.pi * (f - reference)
 
     def theta_of(values: FloatArray) -> FloatArray:
         return np.asarray(values[0] + away * values[1] + values[2] * curve, dtype=np.float64)
 
+    shift, bend = guess
     turned = start.c * np.exp(-1j * theta_of(np.array([0.0, shift, bend])))
     phase = float(np.angle(np.sum(turned)))
     tail = np.array([phase, shift, bend])
@@ -221,7 +211,7 @@ def fit_packet(
         phase=float((tail[0] + np.pi) % (2.0 * np.pi) - np.pi),
         shift=float(tail[1]),
         bend=float(tail[2]),
-        shape=shape,
+        dispersion=dispersion,
         level=levels @ solution[:p],
         fringes=cosine @ solution[p:],
         slope=slope,

@@ -1,0 +1,105 @@
+"""Is what was found a packet? The tests that a lamp, a laser, the mains or a spike fail."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from bench.fringes.detect import ACCEPT, FLOOR_KNOWN, Candidate
+from bench.fringes.model import FloatArray
+from bench.fringes.spectrum import polynomial
+from bench.fringes.window import Window
+from bench.fringes.zero import LinearFit, envelope_of, fit_linear
+
+EVERYWHERE = "fringes everywhere, no packet"
+NOTHING = "nothing rises above the noise like a packet"
+STEP = "the signal jumps there: a step, not a packet"
+FEW_PLACES = 10.0
+
+
+def f_tail(ratio: float, above: float, below: float) -> float:
+    """P(F > ratio) of Fisher's distribution, degrees ``above`` and ``below``.
+
+    Paulson's normal approximation by cube roots (Paulson 1942, from memory), good to a few percent
+    of the tail's logarithm where both degrees exceed four.
+    """
+    if ratio <= 0.0:
+        return 1.0
+    root = ratio ** (1.0 / 3.0)
+    a, b = 2.0 / (9.0 * above), 2.0 / (9.0 * below)
+    z = ((1.0 - b) * root - (1.0 - a)) / math.sqrt(b * root**2 + a)
+    return 0.5 * math.erfc(z / math.sqrt(2.0))
+
+
+def strength(values: FloatArray, fit: LinearFit) -> tuple[float, float]:
+    """Energy of the band over that outside it (an F ratio), and the chance of it in white noise."""
+    unknowns = 2 * fit.frequency.size
+    left = float(np.sum(fit.residual**2))
+    smooth = polynomial(np.arange(values.size, dtype=np.float64), 2)
+    rest = values - smooth @ np.linalg.lstsq(smooth, values, rcond=None)[0]
+    explained = max(float(np.sum(rest**2)) - left, 0.0) / unknowns
+    freedom = max(1, fit.freedom)
+    ratio = explained / max(left / freedom, 1e-300)
+    return ratio, f_tail(ratio, unknowns, freedom)
+
+
+def is_step(part: FloatArray, values: FloatArray, residual_energy: float) -> bool:
+    """Whether a jump on a quadratic level explains the window about as well as fringes do."""
+    smooth = np.linalg.qr(polynomial(part, 2))[0]
+    rest = values - smooth @ (smooth.T @ values)
+    cuts = np.unique(np.linspace(3, part.size - 3, min(part.size - 6, 240)).astype(np.int64))
+    jumps = (np.arange(part.size)[:, None] >= cuts[None, :]).astype(np.float64)
+    jumps -= smooth @ (smooth.T @ jumps)
+    gain = (rest @ jumps) ** 2 / np.maximum(np.sum(jumps**2, axis=0), 1e-9)
+    total = float(np.sum(rest**2))
+    return total - float(gain.max()) < max(1.3 * residual_energy, 0.3 * total)
+
+
+def carried_by_few(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool:
+    """Whether the energy of the band vanishes with the few largest readings."""
+    count = max(3, part.size // 40)
+    keep = np.ones(part.size, dtype=bool)
+    keep[np.argsort(np.abs(values - fit.level))[-count:]] = False
+    if int(keep.sum()) < 2 * fit.frequency.size + 8:
+        return False
+    again = fit_linear(part[keep], values[keep], fit.origin, fit.frequency, np.ones(keep.sum()))
+    _, chance = strength(values[keep], again)
+    return chance > 1e-3
+
+
+def ends_over_top(part: FloatArray, fit: LinearFit) -> tuple[float, float]:
+    """The envelope at both ends of the window over its maximum."""
+    inside = part - fit.origin
+    size = np.abs(envelope_of(fit, np.linspace(inside[0], inside[-1], 8 * fit.frequency.size + 1)))
+    edge = max(2, size.size // 12)
+    top = max(float(size.max()), 1e-300)
+    return float(size[:edge].mean()) / top, float(size[-edge:].mean()) / top
+
+
+def judge(
+    u: FloatArray, flat: FloatArray, candidate: Candidate, window: Window | None
+) -> tuple[str, float]:
+    """Why this is no packet (empty where it is one), and the false-alarm probability."""
+    if window is None:
+        if candidate.false_alarm > ACCEPT:
+            return NOTHING, candidate.false_alarm
+        return "too few readings on what may be a packet", candidate.false_alarm
+    part, values = u[window.first : window.stop], flat[window.first : window.stop]
+    fit = window.fit
+    _, chance = strength(values, fit)
+    by_strength = min(1.0, chance * candidate.places)
+    few = candidate.places < FEW_PLACES
+    false_alarm = by_strength if few else max(candidate.false_alarm, by_strength)
+    false_alarm = max(false_alarm, FLOOR_KNOWN)
+    if by_strength > ACCEPT:
+        return NOTHING, false_alarm
+    if candidate.false_alarm > ACCEPT and not few:
+        return EVERYWHERE, candidate.false_alarm
+    if min(ends_over_top(part, fit)) > 0.6:
+        return EVERYWHERE, 1.0
+    if is_step(part, values, float(np.sum(fit.residual**2))):
+        return STEP, 1.0
+    if carried_by_few(part, values, fit):
+        return NOTHING, 1.0
+    return "", false_alarm
