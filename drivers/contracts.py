@@ -172,8 +172,11 @@ class Stage(Device, Protocol):
         """Live read-back. Raises DeviceError."""
         ...
 
-    def home(self, *, timeout_s: float) -> StageState:
-        """Find the origin and come to rest there. Blocks. Raises DeviceError."""
+    def start_home(self, *, timeout_s: float) -> None:
+        """Begin to find the origin and return at once, so that a stop never has to wait for it.
+
+        ``state`` tells when it is over: at rest there, and ``known``. Raises DeviceError.
+        """
         ...
 
     def start_move(self, target_m: float, speed_m_s: float, *, timeout_s: float) -> None:

@@ -1,0 +1,229 @@
+"""``evenarm run``: perform a procedure here in the terminal, with or without a person."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from bench.cli.output import (
+    EXIT_DEVICE,
+    EXIT_DONE,
+    EXIT_NEGATIVE,
+    EXIT_STOPPED,
+    emit_json,
+
+    report_error,
+)
+from bench.errors import EvenarmError, UsageError
+
+if TYPE_CHECKING:
+    from bench.procedure.session import RunSession
+    from bench.procedure.state import RunState
+
+EXIT_BY_OUTCOME = {
+    "accepted": EXIT_DONE,
+    "rejected": EXIT_NEGATIVE,
+    "not found": EXIT_NEGATIVE,
+    "stopped": EXIT_STOPPED,
+    "fault": EXIT_DEVICE,
+}
+
+
+def command(
+    procedure: Annotated[str, typer.Argument(help="Name of a procedure, or a file.")],
+    bench: Annotated[
+        Path | None, typer.Option("--bench", help="The bench description to use.")
+    ] = None,
+    unattended: Annotated[
+        bool, typer.Option("--unattended", help="Ask nothing (simulated benches, or allowed ones).")
+    ] = False,
+    acknowledge: Annotated[
+        str | None,
+        typer.Option("--acknowledge", help="Who answers for an unattended run; recorded."),
+    ] = None,
+    operator: Annotated[
+        str | None, typer.Option("--operator", help="Your name for the record.")
+    ] = None,
+    seed: Annotated[
+        int | None, typer.Option("--seed", help="Seed of a simulated bench's hidden truth.")
+    ] = None,
+    pace: Annotated[
+        str | None,
+        typer.Option("--pace", help="Simulated bench time: real, fast, or how many times faster."),
+    ] = None,
+    reveal: Annotated[
+        bool, typer.Option("--reveal", help="Tell a simulated bench's truth after the run.")
+    ] = False,
+    as_json: Annotated[bool, typer.Option("--json", help="One JSON document on output.")] = False,
+) -> None:
+    try:
+        status = perform(
+            procedure,
+            bench=bench,
+            unattended=unattended,
+            acknowledge=acknowledge,
+            operator=operator,
+            seed=seed,
+            pace=pace,
+            reveal=reveal,
+            as_json=as_json,
+        )
+    except EvenarmError as error:
+        raise typer.Exit(report_error(error, as_json=as_json)) from None
+    raise typer.Exit(status)
+
+
+def perform(
+    procedure: str,
+    *,
+    bench: Path | None,
+    unattended: bool,
+    acknowledge: str | None,
+    operator: str | None,
+    seed: int | None,
+    pace: str | None,
+    reveal: bool,
+    as_json: bool,
+) -> int:
+    """Run and report. Raises EvenarmError; returns the exit status."""
+    import sys
+
+    from bench.cli.watch import Watcher, signals_stop
+
+    if not unattended and not sys.stdin.isatty():
+        raise UsageError(
+            "nobody is there to answer",
+            where="standard input",
+            why="it is not a terminal, and this run asks questions",
+            mend="run it in a terminal, or with --unattended on a simulated bench",
+        )
+    session = new_session(
+        procedure,
+        bench=bench,
+        unattended=unattended,
+        acknowledge=acknowledge,
+        operator=operator,
+        seed=seed,
+        pace=pace or ("fast" if unattended else "10"),
+    )
+    watcher = Watcher(session, ask=not unattended)
+    with signals_stop(session):
+        watcher.follow()
+    if session.error is not None:
+        raise session.error
+    state = watcher.state()
+    _report(session, state, as_json=as_json, reveal=reveal)
+    return EXIT_BY_OUTCOME.get(state.outcome or "fault", EXIT_DEVICE)
+
+
+def new_session(
+    procedure: str,
+    *,
+    bench: Path | None,
+    unattended: bool,
+    acknowledge: str | None,
+    operator: str | None,
+    seed: int | None,
+    pace: str,
+) -> RunSession:
+    """A run that is ready to begin. Raises EvenarmError."""
+    import getpass
+    import secrets
+    from datetime import UTC, datetime
+
+    from bench.cli.benchfile import open_bench
+    from bench.errors import printable
+    from bench.procedure.devices import parse_pace
+    from bench.procedure.session import RunOptions, RunSession
+    from bench.procedure.text import find_procedure
+
+    paced = parse_pace(pace)
+    spec = open_bench(bench, seed=seed)
+    found = find_procedure(procedure, spec.folder)
+    if operator is None:
+        try:
+            operator = getpass.getuser()
+        except (KeyError, OSError):
+            operator = "unknown"
+    started = datetime.now(UTC)
+    return RunSession(
+        spec,
+        found,
+        RunOptions(
+            operator=printable(operator, 80).strip() or "unknown",
+            unattended=unattended,
+            acknowledged_by=printable(acknowledge, 80).strip() if acknowledge else None,
+            pace=paced,
+        ),
+        now=lambda: datetime.now(UTC),
+        run_id=f"{started:%Y%m%d-%H%M%S}-{secrets.token_hex(2)}",
+    )
+
+
+def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool) -> None:
+    from bench.procedure.decide import result_quantities
+
+    view = session.view()
+    document: dict[str, Any] = {
+        "schema": "evenarm.run/1",
+        "run": session.run_id,
+        "outcome": state.outcome,
+        **result_quantities(session.setup, state),
+        "measurements": list(state.measurements),
+        "head": view.head,
+        "reason": state.reason,
+    }
+    if reveal:
+        document["truth"] = _truth(session, state)
+    if as_json:
+        emit_json(document)
+        return
+    typer.echo("\n".join(_lines(document)))
+
+
+def _truth(session: RunSession, state: RunState) -> dict[str, Any] | None:
+    """What a simulated bench hid: the group zero, and the OPD where the stage was left."""
+    truth = session.reveal()
+    at_m = session.setup.at_wavelength_m
+    if truth is None or at_m is None:
+        return None
+    time_s = state.left_at_s if state.left_at_s is not None else state.time_s
+    zero_m = truth.group_zero_m(at_m, time_s=time_s)
+    document: dict[str, Any] = {"zero": {"value": zero_m * 1e6, "unit": "um"}}
+    if state.left_at_m is not None:
+        opd_m = session.setup.facts.opd_per_m * (state.left_at_m - zero_m)
+        document["residual_opd"] = {"value": opd_m * 1e9, "unit": "nm"}
+    return document
+
+
+def _lines(document: dict[str, Any]) -> list[str]:
+    from bench.quantities import show
+
+    def row(label: str, key: str, unit: str, source: dict[str, Any] = document) -> list[str]:
+        quantity = source.get(key)
+        if quantity is None:
+            return []
+        from bench.quantities import Quantity
+
+        q = Quantity(quantity["value"], quantity["unit"], quantity.get("standard_uncertainty"))
+        q = q.to(unit)
+        return [f"  {label:<22}{show(q.value, q.standard_uncertainty, unit)}"]
+
+    lines = [f"{str(document['outcome']).upper()}: {document['reason']}"]
+    lines += row("zero (stage reading)", "zero", "mm")
+    lines += row("at wavelength", "at_wavelength", "nm")
+    lines += row("stage left at", "stage_left_at", "mm")
+    lines += row("residual OPD", "residual_opd", "nm")
+    lines += row("bench time", "bench_time", "s")
+    truth = document.get("truth")
+    if truth:
+        lines += row("true zero", "zero", "mm", truth)
+        lines += row("true residual OPD", "residual_opd", "nm", truth)
+    lines.append(f"  {'run':<22}{document['run']}")
+    lines.append(f"  {'journal head':<22}{str(document['head'])[:16]}")
+    return lines
+
+
+

@@ -1,0 +1,110 @@
+"""Follow a run in a plain terminal: one line for each thing that happens, questions as they come."""
+
+from __future__ import annotations
+
+import contextlib
+import signal
+import sys
+import threading
+from collections.abc import Iterator
+from types import FrameType
+
+from bench.cli.output import note
+from bench.errors import BenchFault, UsageError, printable
+from bench.procedure.live import LiveView, Question
+from bench.procedure.session import RunSession
+from bench.procedure.state import RunState
+
+__all__ = ["Watcher", "signals_stop"]
+
+LOOK_S = 0.05
+
+
+@contextlib.contextmanager
+def signals_stop(session: RunSession) -> Iterator[None]:
+    """While inside, Ctrl-C, a termination and a lost terminal are software stops."""
+    wanted = [signal.SIGINT, signal.SIGTERM]
+    if hasattr(signal, "SIGHUP"):
+        wanted.append(signal.SIGHUP)
+
+    def stop(number: int, _frame: FrameType | None) -> None:
+        # In a thread: a signal may arrive while this one holds a lock that stopping needs.
+        reason = f"signal {signal.Signals(number).name}"
+        threading.Thread(target=session.stop, args=(reason,), daemon=True).start()
+
+    before = {number: signal.signal(number, stop) for number in wanted}
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+class Watcher:
+    """Performs ``session`` in a thread of its own and tells about it on standard error."""
+
+    def __init__(self, session: RunSession, *, ask: bool) -> None:
+        self._session = session
+        self._ask = ask
+        self._state: RunState | None = None
+        self._thread = threading.Thread(target=self._run, name="conductor", daemon=True)
+        self._done = threading.Event()
+
+    def _run(self) -> None:
+        try:
+            self._state = self._session.perform()
+        finally:
+            self._done.set()
+
+    def state(self) -> RunState:
+        """The run's last state. Raises BenchFault if it has none."""
+        if self._state is None:
+            raise BenchFault("the run ended without a result", mend="look at the journal")
+        return self._state
+
+    def follow(self) -> None:
+        """Until the run has ended."""
+        self._thread.start()
+        said, asked = "", ""
+        while not self._done.wait(LOOK_S):
+            view = self._session.view()
+            now = _line(view)
+            if now != said:
+                note(f"{view.elapsed_s:8.1f} s  {now}")
+                said = now
+            if view.question is not None and self._ask and view.question.id != asked:
+                asked = view.question.id
+                threading.Thread(target=self._put, args=(view.question,), daemon=True).start()
+        self._thread.join()
+
+    def _put(self, question: Question) -> None:
+        """Ask at the terminal, in a thread of its own so that a stop need not wait for an answer."""
+        note(f"\n{printable(question.title)}")
+        for line in question.lines:
+            note(f"  - {printable(line, 400)}")
+        wants = "Your name: " if question.kind == "acknowledge" else "yes or no: "
+        while not self._done.is_set():
+            sys.stderr.write(wants)
+            sys.stderr.flush()
+            text = sys.stdin.readline()
+            if not text:
+                self._session.stop("the terminal was closed")
+                return
+            word = text.strip()
+            try:
+                if question.kind == "acknowledge":
+                    self._session.answer(question.id, word)
+                elif word.lower() in {"yes", "y", "no", "n"}:
+                    self._session.answer(question.id, word.lower().startswith("y"))
+                else:
+                    continue
+            except UsageError as error:
+                note(error.what)
+                continue
+            return
+
+
+def _line(view: LiveView) -> str:
+    step = next((step.title for step in view.steps if step.state == "now"), "")
+    place = f"{step}: " if step else ""
+    return place + ("a question for you" if view.question else view.doing)

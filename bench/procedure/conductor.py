@@ -1,0 +1,321 @@
+"""Performs what a run decides, and feeds back what happened. Every word of both is in the journal.
+
+The order is always the same: an intent is durable before anything is sent, its outcome after. The
+conductor lives in a thread of its own and knows no screen; screens read the board.
+"""
+
+from __future__ import annotations
+
+import threading
+from collections.abc import Callable, Mapping
+from typing import Any
+
+from bench.errors import EvenarmError, JournalError, MotionRefused
+from bench.journal import Journal, finite
+from bench.quantities import StagePosition
+from bench.spec.model import BenchSpec
+from drivers.contracts import DeviceError, StageState
+
+from . import decide as said
+from .board import Board
+from .decide import decide
+from .devices import Devices
+from .guard import Guard
+from .locating import findings, locate_readings
+from .scanning import Readings, ScanStopped, perform_step_scan, perform_sweep, wait_for_rest
+from .state import Event, Pending, RunState, Setup, evolve
+
+__all__ = ["Conductor"]
+
+CHANGE_TIMEOUT_S = 120.0
+REST_TIMEOUT_S = 10.0
+
+
+class Conductor:
+    """One run on one bench. ``run`` blocks; ``answer`` and ``stop`` come from other threads."""
+
+    def __init__(
+        self,
+        setup: Setup,
+        spec: BenchSpec,
+        devices: Devices,
+        guard: Guard,
+        journal: Journal,
+        board: Board,
+    ) -> None:
+        self.setup = setup
+        self.state = RunState()
+        self._spec = spec
+        self._devices = devices
+        self._guard = guard
+        self._journal = journal
+        self._board = board
+        self._sources = {source.name: source for source in spec.sources}
+        self._readings: Readings | None = None
+        self._said = threading.Condition()
+        self._answer: tuple[str, bool, str] | None = None
+        self._stop: tuple[str, str] | None = None
+        self._stop_noted = False
+
+    # --- from other threads ---------------------------------------------------------------------
+
+    def answer(self, question_id: str, accepted: bool, by: str) -> None:
+        """Answer a question; one that is not open any more is ignored."""
+        with self._said:
+            self._answer = (question_id, accepted, by)
+            self._said.notify_all()
+
+    def stop(self, by: str, reason: str) -> None:
+        """Software stop. The axis is told from a thread of its own, ahead of everything queued."""
+        with self._said:
+            again = self._stop is not None
+            self._stop = self._stop or (by, reason)
+            self._said.notify_all()
+        if not again:
+            threading.Thread(target=self._stop_axis, name="software-stop", daemon=True).start()
+
+    def _stop_axis(self) -> None:
+        try:
+            self._guard.stop()
+        except DeviceError:
+            # The run's own thread asks again while it brings everything to rest, and reports.
+            return
+
+    # --- the run --------------------------------------------------------------------------------
+
+    def run(self, started: Mapping[str, Any], interrupted: str) -> RunState:
+        """From the first entry to the last. Raises EvenarmError only where nothing can be written.
+
+        ``started`` is the body of the run's first entry; ``interrupted`` tells of an earlier run
+        whose motion has no outcome in the journal, and makes this one ask before it moves.
+        """
+        try:
+            state = self._guard.state()
+            self._board.stage(state)
+            known = state.known and not interrupted
+            body = {**started, "position_m": state.position_m if known else None}
+            body["position_known"] = known
+            self._feed(said.Begin(body, interrupted, self._now()))
+            while self.state.phase != "ended":
+                self._feed(self._next())
+        except JournalError:
+            self._halt_quietly()
+            raise
+        except BaseException:
+            self._halt_quietly()
+            self._feed_fault("the program failed; its own error follows on screen")
+            raise
+        return self.state
+
+    def _next(self) -> said.Input:
+        try:
+            self._may_go_on()
+            pending = self.state.pending
+            return said.Continue(self._now()) if pending is None else self._perform(pending)
+        except ScanStopped:
+            return self._come_to_rest()
+        except DeviceError as error:
+            return self._fail(error.what, error.device or "a device", error.mend)
+        except MotionRefused as error:
+            if self._stop is not None:
+                return self._come_to_rest()
+            return self._fail(f"{error.what}: {error.why}", "guard", error.mend)
+
+    def _feed(self, happened: said.Input) -> None:
+        """Journal what follows from what happened, then change the state: in that order."""
+        for event in decide(self.setup, self.state, happened):
+            body = {key: value for key, value in event.body.items() if key != "bench_time_s"}
+            self._journal.append(
+                event.kind,
+                finite(body),
+                run=self.setup.run,
+                bench_time_s=event.body["bench_time_s"],
+            )
+            self.state = evolve(self.setup, self.state, event)
+            self._board.event(self.state, event, self._journal.head.sha256)
+
+    def _now(self) -> float:
+        return self._devices.clock.now_s()
+
+    def _may_go_on(self) -> None:
+        if self._stop is not None:
+            raise ScanStopped
+
+    # --- ends -----------------------------------------------------------------------------------
+
+    def _come_to_rest(self) -> said.Input:
+        """After a stop: say that it was asked for, wait until nothing moves, say where it is."""
+        assert self._stop is not None
+        by, reason = self._stop
+        if not self._stop_noted:
+            self._stop_noted = True
+            return said.StopAsked(by, reason, self._now())
+        state = self._at_rest()
+        position_m = state.position_m if state is not None and state.known else None
+        return said.Stopped(position_m, position_m is not None, reason, self._now())
+
+    def _fail(self, what: str, device: str, mend: str) -> said.Failed:
+        state = self._at_rest()
+        known = state is not None and state.known
+        position_m = state.position_m if state is not None and known else None
+        return said.Failed(what, device, mend, position_m, known, self._now())
+
+    def _at_rest(self) -> StageState | None:
+        """Stop the axis and wait for it; None where it does not answer or does not stop."""
+        try:
+            self._guard.stop()
+            until_s = self._now() + REST_TIMEOUT_S
+            while (state := self._guard.state()).moving:
+                self._board.stage(state)
+                if self._now() > until_s:
+                    return None
+                self._devices.clock.sleep_s(0.02)
+        except DeviceError:
+            return None
+        self._board.stage(state)
+        return state
+
+    def _halt_quietly(self) -> None:
+        try:
+            self._guard.stop()
+        except DeviceError:
+            return
+
+    def _feed_fault(self, what: str) -> None:
+        try:
+            self._feed(said.Failed(what, "program", "report it", None, False, self._now()))
+        except EvenarmError:
+            return
+
+    # --- performing -----------------------------------------------------------------------------
+
+    def _perform(self, pending: Pending) -> said.Input:
+        match pending.kind:
+            case "question":
+                return self._wait_for_answer(str(pending.body["id"]))
+            case "source":
+                return self._change_source(str(pending.body["source"]))
+            case "home":
+                return self._home()
+            case "move":
+                return self._move(pending.body)
+            case "scan":
+                return self._scan(pending.body)
+            case "locate":
+                return self._locate(pending.body)
+
+    def _wait_for_answer(self, question_id: str) -> said.Input:
+        with self._said:
+            while self._stop is None:
+                if self._answer is not None and self._answer[0] == question_id:
+                    _, accepted, by = self._answer
+                    self._answer = None
+                    return said.Answered(accepted, by, self._now())
+                self._said.wait()
+        raise ScanStopped
+
+    def _change_source(self, name: str) -> said.Input:
+        source = self._sources[name]
+        if self._devices.changer is not None:
+            self._devices.changer.call(
+                lambda changer: changer.select(name, timeout_s=CHANGE_TIMEOUT_S),
+                timeout_s=CHANGE_TIMEOUT_S,
+            )
+        elif self._devices.select_by_simulated_hand is not None:
+            self._sleep(source.change_time_s)
+            self._devices.select_by_simulated_hand(name)
+        self._sleep(source.warm_up_s)
+        return said.SourceReady(self._now())
+
+    def _sleep(self, duration_s: float) -> None:
+        """Let bench time pass in slices, so that a stop is heard."""
+        until_s = self._now() + duration_s
+        while (left_s := until_s - self._now()) > 1e-9:
+            self._may_go_on()
+            self._devices.clock.sleep_s(min(left_s, 0.1))
+            self._board.time(self._now())
+
+    def _home(self) -> said.Input:
+        self._guard.start_home()
+        travel_m = self._spec.stage.travel_m
+        assert travel_m is not None
+        expected_s = (travel_m[1] - travel_m[0]) / self._spec.stage.speed_m_s
+        state = self._wait_for_rest(None, expected_s)
+        return said.HomeEnded(state.position_m, self._now())
+
+    def _move(self, body: Mapping[str, Any]) -> said.Input:
+        target_m, speed_m_s = float(body["target_m"]), float(body["speed_m_s"])
+        distance_m = abs(target_m - (self.state.position_m or 0.0))
+        self._guard.start_move(StagePosition(target_m), speed_m_s)
+        expected_s = distance_m / speed_m_s + speed_m_s / self._spec.stage.acceleration_m_s2
+        state = self._wait_for_rest(target_m, expected_s)
+        return said.MoveEnded(state.position_m, self._now())
+
+    def _wait_for_rest(self, target_m: float | None, expected_s: float) -> StageState:
+        return wait_for_rest(
+            self._guard,
+            self._devices,
+            self._spec,
+            target_m,
+            expected_s=expected_s,
+            watch=self._board.stage,
+            may_go_on=self._may_go_on,
+        )
+
+    def _scan(self, body: Mapping[str, Any]) -> said.Input:
+        name = str(body["scan"])
+
+        def keep(part: Readings) -> None:
+            self._journal.append_readings(
+                self.setup.run, name, part.columns, bench_time_s=self._now()
+            )
+            self._board.readings(part)
+
+        common: dict[str, Callable[..., Any]] = {
+            "keep": keep,
+            "watch": self._board.stage,
+            "may_go_on": self._may_go_on,
+        }
+        start_m, stop_m = float(body["start_m"]), float(body["stop_m"])
+        if body["mode"] == "sweep":
+            readings, state = perform_sweep(
+                self._guard,
+                self._devices,
+                self._spec,
+                start_m=start_m,
+                stop_m=stop_m,
+                end_m=float(body["end_m"]),
+                speed_m_s=float(body["speed_m_s"]),
+                **common,
+            )
+        else:
+            readings, state = perform_step_scan(
+                self._guard,
+                self._devices,
+                self._spec,
+                start_m=start_m,
+                stop_m=stop_m,
+                increment_m=float(body["increment_m"]),
+                **common,
+            )
+        if readings.signal.size:
+            # Positions as they go into the locating: smoothed, so not those kept block by block.
+            self._journal.append_readings(
+                self.setup.run, f"{name} as located", readings.columns, bench_time_s=self._now()
+            )
+        self._readings = readings
+        mean_time_s = float(readings.time_s.mean()) if readings.time_s.size else self._now()
+        return said.ScanEnded(state.position_m, readings.signal.size, mean_time_s, self._now())
+
+    def _locate(self, body: Mapping[str, Any]) -> said.Input:
+        assert self._readings is not None and self.state.leg is not None
+        source = self._sources[str(body["source"])]
+        located = locate_readings(self._spec, source, self._readings)
+        self._board.located(located)
+        found = findings(self._spec, self._readings, located, self.state.leg.speed_m_s)
+        return said.LocateEnded(found, self._now())
+
+
+def event_of(kind: str, body: Mapping[str, Any], bench_time_s: float | None) -> Event:
+    """A journal entry as the event that it was, for folding."""
+    return Event(kind, {**body, "bench_time_s": bench_time_s})

@@ -1,0 +1,544 @@
+"""What a run does next. ``decide`` is pure: a state and what just happened in, events out.
+
+Events that intend something (a question, a source, a move, a scan) leave the state with something
+outstanding; the conductor performs it and comes back with what happened. ``Continue`` asks for the
+next thing when nothing is outstanding.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from bench.planning import plan_search
+from bench.planning.model import Leg
+
+from .acceptance import combine, judge
+from .state import Event, RunState, Setup
+from .text import ProcedureStep
+
+__all__ = [
+    "Answered",
+    "Begin",
+    "Continue",
+    "Failed",
+    "HomeEnded",
+    "Input",
+    "LocateEnded",
+    "MoveEnded",
+    "ScanEnded",
+    "SourceReady",
+    "StopAsked",
+    "Stopped",
+    "decide",
+]
+
+MOST_LEGS = 60
+MOST_RETURNS = 2
+
+
+# --- what can happen -------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Begin:
+    """The run begins; ``body`` is kept as it is. ``interrupted`` tells of an earlier run's crash."""
+
+    body: Mapping[str, Any]
+    interrupted: str
+    time_s: float
+
+
+@dataclass(frozen=True)
+class Continue:
+    time_s: float
+
+
+@dataclass(frozen=True)
+class Answered:
+    accepted: bool
+    by: str
+    time_s: float
+
+
+@dataclass(frozen=True)
+class SourceReady:
+    time_s: float
+
+
+@dataclass(frozen=True)
+class HomeEnded:
+    position_m: float
+    time_s: float
+
+
+@dataclass(frozen=True)
+class MoveEnded:
+    position_m: float
+    time_s: float
+
+
+@dataclass(frozen=True)
+class ScanEnded:
+    position_m: float
+    rows: int
+    mean_time_s: float
+    time_s: float
+
+
+@dataclass(frozen=True)
+class LocateEnded:
+    """``body`` says found, zero_m, zero_u_m, zero_time_s, reason and the other findings."""
+
+    body: Mapping[str, Any]
+    time_s: float
+
+
+@dataclass(frozen=True)
+class Failed:
+    """A device failed; the stage was told to stop and then said where it is, if it could."""
+
+    what: str
+    device: str
+    mend: str
+    position_m: float | None
+    position_known: bool
+    time_s: float
+
+
+@dataclass(frozen=True)
+class StopAsked:
+    by: str
+    reason: str
+    time_s: float
+
+
+@dataclass(frozen=True)
+class Stopped:
+    """The stage is at rest after a stop, or could not say."""
+
+    position_m: float | None
+    position_known: bool
+    reason: str
+    time_s: float
+
+
+Input = (
+    Begin
+    | Continue
+    | Answered
+    | SourceReady
+    | HomeEnded
+    | MoveEnded
+    | ScanEnded
+    | LocateEnded
+    | Failed
+    | StopAsked
+    | Stopped
+)
+
+
+# --- the decision -------------------------------------------------------------------------------
+
+
+def decide(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...]:
+    """The events that follow from ``happened`` in ``state``; none where it changes nothing."""
+    events = _decide(setup, state, happened)
+    return tuple(
+        Event(event.kind, {**event.body, "bench_time_s": happened.time_s}) for event in events
+    )
+
+
+def _decide(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...]:
+    if state.phase == "ended":
+        return ()
+    match happened:
+        case Begin():
+            return _begin(setup, state, happened)
+        case StopAsked():
+            return (Event("stop-requested", {"by": happened.by, "reason": happened.reason}),)
+        case Stopped():
+            stopped = {
+                "position_m": happened.position_m,
+                "position_known": happened.position_known,
+            }
+            return (Event("stopped", stopped), _end(setup, state, "stopped", happened.reason))
+        case Failed():
+            return _failed(setup, state, happened)
+        case Continue():
+            return _continue(setup, state)
+        case _:
+            return _outcome(setup, state, happened)
+
+
+def _begin(setup: Setup, state: RunState, happened: Begin) -> tuple[Event, ...]:
+    if state.phase != "new":
+        return ()
+    started = Event("run-started", happened.body)
+    if happened.body.get("position_known") and not happened.interrupted:
+        return (started,)
+    why = happened.interrupted or "The stage does not know where it is."
+    question = {
+        "id": "position",
+        "kind": "confirm",
+        "title": "The stage position is not known",
+        "lines": [
+            why,
+            "Look at the stage. It must be free to travel to its origin.",
+            "Yes: it is homed now, which moves it. No: the run ends and nothing moves.",
+        ],
+    }
+    return (started, *_ask(setup, question))
+
+
+def _ask(setup: Setup, question: Mapping[str, Any]) -> tuple[Event, ...]:
+    asked = Event("question-asked", question)
+    return (asked, _answer(question, True, setup.by)) if setup.unattended else (asked,)
+
+
+def _answer(question: Mapping[str, Any], accepted: bool, by: str) -> Event:
+    kept = {"id": question["id"], "title": question["title"]}
+    return Event("question-answered", {**kept, "accepted": accepted, "by": by})
+
+
+def _outcome(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...]:
+    """The end of what was outstanding. An answer to nothing changes nothing."""
+    pending = state.pending
+    if pending is None:
+        return ()
+    match pending.kind, happened:
+        case "question", Answered():
+            answer = _answer(pending.body, happened.accepted, happened.by)
+            if happened.accepted and "source" in pending.body:
+                return (answer, Event("source-selected", {"source": pending.body["source"]}))
+            return (answer,)
+        case "source", SourceReady():
+            return (Event("source-selected", {"source": pending.body["source"]}),)
+        case "home", HomeEnded():
+            return (Event("home-done", {"position_m": happened.position_m}),)
+        case "move", MoveEnded():
+            body = {"position_m": happened.position_m, "role": pending.body["role"]}
+            return (Event("move-done", body),)
+        case "scan", ScanEnded():
+            body = {
+                "scan": pending.body["scan"],
+                "name": pending.body["name"],
+                "source": pending.body["source"],
+                "rows": happened.rows,
+                "position_m": happened.position_m,
+                "mean_time_s": happened.mean_time_s,
+            }
+            return (Event("scan-done", body),)
+        case "locate", LocateEnded():
+            kept = {key: pending.body[key] for key in ("scan", "name", "source")}
+            return (Event("located", {**kept, **happened.body}),)
+        case _:
+            return ()
+
+
+def _failed(setup: Setup, state: RunState, happened: Failed) -> tuple[Event, ...]:
+    body = {
+        "what": happened.what,
+        "device": happened.device,
+        "mend": happened.mend,
+        "position_m": happened.position_m,
+        "position_known": happened.position_known,
+    }
+    reason = f"{happened.device}: {happened.what}"
+    if happened.mend:
+        reason += f" ({happened.mend})"
+    return (Event("move-failed", body), _end(setup, state, "fault", reason))
+
+
+def _end(setup: Setup, state: RunState, outcome: str, reason: str) -> Event:
+    """The last entry of a run; it repeats the result, so that it can be read alone."""
+    body: dict[str, Any] = {"outcome": outcome, "reason": reason}
+    body |= result_quantities(setup, state)
+    body["measurements"] = list(state.measurements)
+    return Event("run-ended", body)
+
+
+def result_quantities(setup: Setup, state: RunState) -> dict[str, Any]:
+    """The contract's quantities of a run's result, as far as they are known."""
+    result: dict[str, Any] = {}
+    if state.verdict is not None:
+        zero_m, u_m = float(state.verdict["zero_m"]), float(state.verdict["zero_u_m"])
+        result["residual_opd"] = _quantity(
+            state.verdict["residual_opd_m"] * 1e9, "nm", state.verdict["residual_u_m"] * 1e9
+        )
+    elif state.zeros:
+        newest = state.zeros[-1]
+        zero_m, u_m = newest.zero_m, newest.u_m
+    else:
+        zero_m = u_m = math.nan
+    if math.isfinite(zero_m):
+        result["zero"] = _quantity(zero_m * 1e6, "um", u_m * 1e6)
+    if state.findings is not None and "at_wavelength" in state.findings:
+        result["at_wavelength"] = state.findings["at_wavelength"]
+    if state.left_at_m is not None:
+        result["stage_left_at"] = _quantity(
+            state.left_at_m * 1e6, "um", setup.facts.resolution_m / math.sqrt(12.0) * 1e6
+        )
+    result["bench_time"] = _quantity(state.time_s - state.began_s, "s")
+    return result
+
+
+def _quantity(value: float, unit: str, uncertainty: float | None = None) -> dict[str, Any]:
+    document: dict[str, Any] = {"value": value, "unit": unit}
+    if uncertainty is not None:
+        document["standard_uncertainty"] = uncertainty
+    return document
+
+
+# --- going on -----------------------------------------------------------------------------------
+
+
+def _continue(setup: Setup, state: RunState) -> tuple[Event, ...]:
+    if state.phase == "new" or state.pending is not None:
+        return ()
+    if state.refused:
+        return (_end(setup, state, "stopped", state.refused),)
+    if not state.position_known:
+        return (Event("home-intended", {"why": "the stage position is not known"}),)
+    if state.leg is not None:
+        return _leg_on(setup, state, state.leg)
+    if not state.step_open:
+        return _next_step(setup, state)
+    step = setup.procedure.steps[state.step]
+    match step.kind:
+        case "caution" | "confirm":
+            # The question went out with the step's start; nothing outstanding means it is answered.
+            return (Event("step-done", {}),)
+        case "search":
+            return _search(setup, state)
+        case "scan":
+            return _scan(setup, state, step)
+        case "move":
+            return _move_to_zero(setup, state)
+        case "compare":
+            return _compare(setup, state, step)
+        case "record":
+            return (*_measurements(setup, state), Event("step-done", {}))
+        case _:
+            raise AssertionError(f"unknown step kind {step.kind}")
+
+
+def _next_step(setup: Setup, state: RunState) -> tuple[Event, ...]:
+    index = state.step + 1
+    if index < len(setup.procedure.steps):
+        step = setup.procedure.steps[index]
+        body = {"index": index, "kind": step.kind, "title": step.title}
+        started = Event("step-started", body)
+        if step.kind in {"caution", "confirm"}:
+            return (started, *_ask(setup, _question(setup, step, index)))
+        return (started,)
+    if state.verdict is None:
+        return (_end(setup, state, "rejected", "this procedure does not judge its result"),)
+    accepted = bool(state.verdict["accepted"])
+    outcome = "accepted" if accepted else "rejected"
+    return (_end(setup, state, outcome, str(state.verdict["reason"])),)
+
+
+def _question(setup: Setup, step: ProcedureStep, index: int) -> dict[str, Any]:
+    lines = [*step.text, *(setup.caution_lines if step.include_bench else ())]
+    kind = "acknowledge" if step.kind == "caution" else "confirm"
+    return {"id": f"step-{index}", "kind": kind, "title": step.title, "lines": lines}
+
+
+def _search(setup: Setup, state: RunState) -> tuple[Event, ...]:
+    assert state.belief is not None
+    if state.legs_run >= MOST_LEGS:
+        return _not_found(setup, state, f"{MOST_LEGS} scans were made without locating a packet")
+    plan = plan_search(setup.facts, state.belief, state.source)
+    if not plan.legs:
+        seen = f"; the last scan says: {state.missed}" if state.missed else ""
+        return _not_found(setup, state, "the packet is not where it was expected" + seen)
+    leg = plan.legs[0]
+    if leg.purpose != "search":
+        return (Event("step-done", {}),)
+    return (_chosen(leg, plan.expected_time_s),)
+
+
+def _not_found(setup: Setup, state: RunState, reason: str) -> tuple[Event, ...]:
+    return (Event("step-done", {"passed": False}), _end(setup, state, "not found", reason))
+
+
+def _chosen(leg: Leg, expected_time_s: float) -> Event:
+    return Event("leg-chosen", {"leg": asdict(leg), "expected_time_s": expected_time_s})
+
+
+def _scan(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ...]:
+    assert state.belief is not None
+    if state.zero(step.name) is not None:
+        return (Event("step-done", {}),)
+    plan = plan_search(setup.facts, state.belief, state.source)
+    final = next((leg for leg in plan.legs if leg.purpose == "final"), None)
+    bracketed = bool(plan.legs) and plan.legs[0].purpose != "search"
+    if not state.missed and final is not None and bracketed:
+        return (_chosen(final, plan.expected_time_s),)
+    why = state.missed or "the zero is not bracketed well enough for it"
+    reason = f"the scan {step.name!r} saw no packet: {why}"
+    failed = Event("step-done", {"passed": False})
+    if step.if_missed == "search" and state.went_back < MOST_RETURNS:
+        back = max(
+            index
+            for index, earlier in enumerate(setup.procedure.steps[: state.step])
+            if earlier.kind == "search"
+        )
+        title = setup.procedure.steps[back].title
+        again = {"index": back, "kind": "search", "title": title, "why": reason}
+        return (failed, Event("step-started", again))
+    outcome = "not found" if not state.zeros else "rejected"
+    return (failed, _end(setup, state, outcome, reason))
+
+
+# --- one leg --------------------------------------------------------------------------------------
+
+
+def _leg_on(setup: Setup, state: RunState, leg: Leg) -> tuple[Event, ...]:
+    if state.source != leg.source:
+        return _change_source(setup, leg)
+    facts = setup.facts
+    start_m = run_up_m(setup, leg)
+    if state.at != "run-up":
+        return (_move(setup, state, start_m, "run-up", f"run-up for the scan with {leg.source}"),)
+    step = setup.procedure.steps[state.step]
+    body = {
+        "scan": f"scan-{state.scans_run + 1}",
+        "name": step.name or f"leg {state.legs_run}",
+        "source": leg.source,
+        "mode": leg.mode,
+        "purpose": leg.purpose,
+        "start_m": leg.start_m,
+        "stop_m": leg.stop_m,
+        "end_m": overrun_m(setup, leg, start_m),
+        "speed_m_s": leg.speed_m_s,
+        "increment_m": leg.increment_m,
+        "integration_s": facts.integration_s,
+        "expected_time_s": leg.expected_time_s,
+    }
+    return (Event("scan-intended", body),)
+
+
+def _change_source(setup: Setup, leg: Leg) -> tuple[Event, ...]:
+    if setup.source_change != "hand":
+        return (Event("source-intended", {"source": leg.source}),)
+    question = {
+        "id": f"source {leg.source}",
+        "kind": "confirm",
+        "title": f"Change the source to: {leg.source}",
+        "lines": [
+            "Change it by hand, mind hot parts and beams, and close the covers again.",
+            f"Yes: {leg.source} is in place. No: the run ends and nothing moves.",
+        ],
+        "source": leg.source,
+    }
+    # Never answered for an absent person: whether a lamp was changed is not a matter of consent.
+    return (Event("question-asked", question),)
+
+
+def _within(setup: Setup, position_m: float) -> float:
+    low_m, high_m = setup.facts.travel_m
+    return min(max(position_m, low_m), high_m)
+
+
+def _ramp_m(setup: Setup, leg: Leg) -> float:
+    """Room to reach the sweep's speed, with a margin for the first read-backs."""
+    speed_m_s = leg.speed_m_s or 0.0
+    return 1.2 * speed_m_s**2 / (2.0 * setup.facts.acceleration_m_s2) + 0.1 * speed_m_s
+
+
+def run_up_m(setup: Setup, leg: Leg) -> float:
+    """Where a scan has to set off so that its data are all taken from the approach side."""
+    facts = setup.facts
+    room_m = facts.reversal_allowance_m + _ramp_m(setup, leg)
+    return _within(setup, leg.start_m - facts.approach * room_m)
+
+
+def overrun_m(setup: Setup, leg: Leg, from_m: float) -> float:
+    """Where a sweep's move ends: beyond the data, so that they end at full speed."""
+    facts = setup.facts
+    end_m = _within(setup, leg.stop_m + facts.approach * _ramp_m(setup, leg))
+    return from_m + _limited(end_m - from_m, facts.longest_move_m)
+
+
+def _limited(distance_m: float, most_m: float) -> float:
+    return min(max(distance_m, -most_m), most_m)
+
+
+def _move(setup: Setup, state: RunState, target_m: float, role: str, why: str) -> Event:
+    """The next hop towards ``target_m``: no command asks for more than the longest move."""
+    assert state.position_m is not None
+    distance_m = target_m - state.position_m
+    hop_m = _limited(distance_m, setup.facts.longest_move_m)
+    arrives = abs(distance_m) <= setup.facts.longest_move_m
+    body = {
+        "target_m": target_m if arrives else state.position_m + hop_m,
+        "speed_m_s": setup.facts.speed_m_s,
+        "role": role if arrives else "hop",
+        "why": why,
+    }
+    return Event("move-intended", body)
+
+
+# --- the end -------------------------------------------------------------------------------------
+
+
+def _move_to_zero(setup: Setup, state: RunState) -> tuple[Event, ...]:
+    facts = setup.facts
+    if state.at == "zero":
+        return (Event("step-done", {}),)
+    newest = state.zeros[-2:]
+    zero = combine(*newest) if len(newest) == 2 else newest[0]
+    low_m, high_m = facts.travel_m
+    if not low_m <= zero.zero_m <= high_m:
+        return _not_found(setup, state, "the zero lies outside the travel limits")
+    before_m = _within(setup, zero.zero_m - facts.approach * facts.reversal_allowance_m)
+    if state.at != "approach":
+        return (_move(setup, state, before_m, "approach", "to approach the zero from one side"),)
+    return (_move(setup, state, zero.zero_m, "zero", "to the zero"),)
+
+
+def _compare(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ...]:
+    first, second = (state.zero(name) for name in step.scans)
+    assert first is not None and second is not None
+    assert state.left_at_m is not None and state.left_at_s is not None
+    verdict = judge(
+        setup.accept,
+        opd_per_m=setup.facts.opd_per_m,
+        resolution_m=setup.facts.resolution_m,
+        first=first,
+        second=second,
+        left_at_m=state.left_at_m,
+        left_at_s=state.left_at_s,
+    )
+    return (
+        Event("judged", asdict(verdict)),
+        Event("step-done", {"passed": verdict.accepted}),
+    )
+
+
+def _measurements(setup: Setup, state: RunState) -> tuple[Event, ...]:
+    rows: list[tuple[str, dict[str, Any]]] = []
+    result = result_quantities(setup, state)
+    rows += [(name, result[name]) for name in ("zero", "residual_opd") if name in result]
+    if state.verdict is not None:
+        rows.append(("scans_differ_opd", _quantity(state.verdict["scans_differ_opd_m"] * 1e9, "nm")))
+    for name in ("contrast", "amplitude", "mean_wavelength"):
+        if state.findings is not None and name in state.findings:
+            rows.append((name, dict(state.findings[name])))
+    shared = {
+        "at_wavelength": result.get("at_wavelength"),
+        "scans": [zero.scan for zero in state.zeros],
+        "source": state.source,
+        "by": setup.by,
+    }
+    return tuple(
+        Event(
+            "measurement",
+            {"id": f"{setup.run}-{number}", "name": name, **quantity, **shared},
+        )
+        for number, (name, quantity) in enumerate(rows, 1)
+    )
