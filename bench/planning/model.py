@@ -32,8 +32,8 @@ class BenchFacts:
     """Everything about a bench that a plan depends on.
 
     ``opd_per_m`` is the signed OPD for one unit of stage reading, air included. ``approach`` is +1
-    (increasing) or -1. ``glass_shift_m`` is the standard uncertainty, in stage reading, of the shift
-    of the group zero between two sources that unknown residual glass allows.
+    (increasing) or -1. ``glass_shift_m`` is the standard uncertainty, in stage reading, of the
+    shift of the group zero between two sources that unknown residual glass allows.
     """
 
     opd_per_m: float
@@ -57,8 +57,8 @@ class BenchFacts:
 class Leg:
     """One scan of the plan: from ``start_m`` to ``stop_m`` in the approach direction.
 
-    A sweep has ``speed_m_s``, a step scan ``increment_m``; the other is None. ``half_width_after_m``
-    is of the 95 % interval in stage reading, if the packet is there.
+    A sweep has ``speed_m_s``, a step scan ``increment_m``; the other is None.
+    ``half_width_after_m`` is of the 95 % interval in stage reading, if the packet is there.
     """
 
     source: str
