@@ -59,21 +59,21 @@ class Quantity:
         have, want = known(self.unit, ""), known(unit, "")
         if have.powers != want.powers:
             raise QuantityError(f"{self} cannot be written in {printable(unit, 40)!r}")
-        value = (self.value * have.factor + have.offset - want.offset) / want.factor
+        value = want.from_si(have.to_si(self.value) + have.offset - want.offset)
         u = self.standard_uncertainty
-        return Quantity(value, unit, None if u is None else u * have.factor / want.factor)
+        return Quantity(value, unit, None if u is None else want.from_si(have.to_si(u)))
 
     @property
     def si(self) -> float:
         """The value in SI base units: metres, seconds, volts; temperatures in kelvin."""
         unit = known(self.unit, "")
-        return self.value * unit.factor + unit.offset
+        return unit.to_si(self.value) + unit.offset
 
     @property
     def si_uncertainty(self) -> float | None:
         """The standard uncertainty in the unit of ``si``."""
         u = self.standard_uncertainty
-        return None if u is None else u * known(self.unit, "").factor
+        return None if u is None else known(self.unit, "").to_si(u)
 
     def as_json(self) -> dict[str, Any]:
         """``{"value": .., "unit": .., "standard_uncertainty": ..}``, the last where known."""

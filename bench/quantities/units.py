@@ -43,10 +43,19 @@ SIGNALS = ("voltage", "current", "power", "counts")
 
 
 @dataclass(frozen=True)
-class _Unit:
-    factor: float
+class Unit:
+    """SI = value x ``times`` / ``over`` + ``offset``; the two keep 600 nm at 6e-07 exactly."""
+
+    times: float
     powers: Powers
     offset: float = 0.0  # kelvin at zero of a temperature scale
+    over: float = 1.0
+
+    def to_si(self, value: float) -> float:
+        return value * self.times / self.over
+
+    def from_si(self, value: float) -> float:
+        return value * self.over / self.times
 
 
 def _dim(name: str) -> Powers:
@@ -56,48 +65,48 @@ def _dim(name: str) -> Powers:
 # The units of a bench, so that reading a description need not import pint; a test holds every row
 # against pint. Symbols in the first table take the prefixes of the SI.
 _PREFIXED = {
-    "m": _Unit(1.0, _dim("length")),
-    "s": _Unit(1.0, _dim("time")),
-    "Hz": _Unit(1.0, _dim("frequency")),
-    "V": _Unit(1.0, _dim("voltage")),
-    "A": _Unit(1.0, _dim("current")),
-    "W": _Unit(1.0, _dim("power")),
-    "K": _Unit(1.0, _dim("temperature")),
-    "Pa": _Unit(1.0, _dim("pressure")),
-    "bar": _Unit(1e5, _dim("pressure")),
-    "rad": _Unit(1.0, _dim("angle")),
+    "m": Unit(1.0, _dim("length")),
+    "s": Unit(1.0, _dim("time")),
+    "Hz": Unit(1.0, _dim("frequency")),
+    "V": Unit(1.0, _dim("voltage")),
+    "A": Unit(1.0, _dim("current")),
+    "W": Unit(1.0, _dim("power")),
+    "K": Unit(1.0, _dim("temperature")),
+    "Pa": Unit(1.0, _dim("pressure")),
+    "bar": Unit(1e5, _dim("pressure")),
+    "rad": Unit(1.0, _dim("angle")),
 }
 _PLAIN = {
-    "": _Unit(1.0, UNITLESS),
-    "%": _Unit(1e-2, UNITLESS),
-    "ppm": _Unit(1e-6, UNITLESS),
-    "ppb": _Unit(1e-9, UNITLESS),
-    "in": _Unit(0.0254, _dim("length")),
-    "mil": _Unit(25.4e-6, _dim("length")),
-    "Å": _Unit(1e-10, _dim("length")),
-    "min": _Unit(60.0, _dim("time")),
-    "h": _Unit(3600.0, _dim("time")),
-    "deg": _Unit(math.pi / 180, _dim("angle")),
-    "°": _Unit(math.pi / 180, _dim("angle")),
-    "count": _Unit(1.0, _dim("counts")),
-    "counts": _Unit(1.0, _dim("counts")),
-    "degC": _Unit(1.0, _dim("temperature"), 273.15),
-    "°C": _Unit(1.0, _dim("temperature"), 273.15),
-    "degF": _Unit(5 / 9, _dim("temperature"), 459.67 * 5 / 9),
+    "": Unit(1.0, UNITLESS),
+    "%": Unit(1.0, UNITLESS, over=1e2),
+    "ppm": Unit(1.0, UNITLESS, over=1e6),
+    "ppb": Unit(1.0, UNITLESS, over=1e9),
+    "in": Unit(254.0, _dim("length"), over=1e4),
+    "mil": Unit(254.0, _dim("length"), over=1e7),
+    "Å": Unit(1.0, _dim("length"), over=1e10),
+    "min": Unit(60.0, _dim("time")),
+    "h": Unit(3600.0, _dim("time")),
+    "deg": Unit(math.pi, _dim("angle"), over=180.0),
+    "°": Unit(math.pi, _dim("angle"), over=180.0),
+    "count": Unit(1.0, _dim("counts")),
+    "counts": Unit(1.0, _dim("counts")),
+    "degC": Unit(1.0, _dim("temperature"), 273.15),
+    "°C": Unit(1.0, _dim("temperature"), 273.15),
+    "degF": Unit(5.0, _dim("temperature"), 459.67 * 5 / 9, 9.0),
 }
-_PREFIXES = {
-    "f": 1e-15,
-    "p": 1e-12,
-    "n": 1e-9,
-    "u": 1e-6,
-    "m": 1e-3,
-    "c": 1e-2,
-    "d": 1e-1,
-    "h": 1e2,
-    "k": 1e3,
-    "M": 1e6,
-    "G": 1e9,
-    "T": 1e12,
+_PREFIXES: dict[str, tuple[float, float]] = {  # times, over
+    "f": (1.0, 1e15),
+    "p": (1.0, 1e12),
+    "n": (1.0, 1e9),
+    "u": (1.0, 1e6),
+    "m": (1.0, 1e3),
+    "c": (1.0, 1e2),
+    "d": (1.0, 1e1),
+    "h": (1e2, 1.0),
+    "k": (1e3, 1.0),
+    "M": (1e6, 1.0),
+    "G": (1e9, 1.0),
+    "T": (1e12, 1.0),
 }
 _COMMON = tuple(
     """
@@ -113,7 +122,7 @@ _FACTOR = re.compile(r"(?P<name>[A-Za-zÅΩ°%_]+)(?:(?:\^|\*\*)?(?P<power>-?[1-
 
 
 @cache
-def _from_pint(name: str) -> _Unit | None:
+def _from_pint(name: str) -> Unit | None:
     """A unit by its bare name, from pint's registry; None where there is none that is linear."""
     import pint
 
@@ -129,7 +138,7 @@ def _from_pint(name: str) -> _Unit | None:
         if base not in _BASES or power != int(power):
             return None
         powers[_BASES.index(base)] = int(power)
-    return _Unit(float(one.magnitude), tuple(powers))  # type: ignore[arg-type]
+    return Unit(float(one.magnitude), tuple(powers))  # type: ignore[arg-type]
 
 
 @cache
@@ -139,7 +148,7 @@ def _pint_registry() -> Any:
     return pint.UnitRegistry()
 
 
-def _named(name: str) -> _Unit | None:
+def _named(name: str) -> Unit | None:
     if name in _PLAIN:
         return _PLAIN[name]
     if name in _PREFIXED:
@@ -147,12 +156,12 @@ def _named(name: str) -> _Unit | None:
     scale = _PREFIXES.get(name[:1])
     base = _PREFIXED.get(name[1:])
     if scale is not None and base is not None:
-        return _Unit(scale * base.factor, base.powers)
+        return Unit(scale[0] * base.times, base.powers, over=scale[1] * base.over)
     return _from_pint(name)
 
 
 @cache
-def _unit(text: str) -> _Unit | None:
+def _unit(text: str) -> Unit | None:
     """The unit written as ``text``: names, small whole powers, products and quotients."""
     text = re.sub("[⁰¹²³⁴⁵⁶⁷⁸⁹⁻]+", lambda m: "^" + m.group().translate(_SUPER), text)
     text = text.translate(_MICRO)
@@ -160,7 +169,8 @@ def _unit(text: str) -> _Unit | None:
         return _PLAIN[text]
     if len(text) > 40:
         return None
-    factor, powers, sign, at = 1.0, list(UNITLESS), 1, 0
+    powers, sign, at = list(UNITLESS), 1, 0
+    times, over = 1.0, 1.0
     if re.match(r"1\s*/", text):
         sign, at = -1, text.index("/") + 1
     offset, parts = 0.0, 0
@@ -173,21 +183,22 @@ def _unit(text: str) -> _Unit | None:
         if unit is None:
             return None
         power = sign * int(match["power"] or 1)
-        factor *= unit.factor**power
+        times *= unit.times**power if power > 0 else unit.over**-power
+        over *= unit.over**power if power > 0 else unit.times**-power
         powers = [have + power * more for have, more in zip(powers, unit.powers, strict=True)]
         parts += 1
         offset = unit.offset if (parts, power) == (1, 1) else 0.0
         at = match.end()
         rest = text[at:].lstrip()
         if not rest:
-            return _Unit(factor, tuple(powers), offset)  # type: ignore[arg-type]
+            return Unit(times, tuple(powers), offset, over)  # type: ignore[arg-type]
         if rest[0] not in "/*·":
             return None
         sign = -1 if rest[0] == "/" else 1
         at = len(text) - len(rest) + 1
 
 
-def known(text: str, where: str) -> _Unit:
+def known(text: str, where: str) -> Unit:
     unit = _unit(text)
     if unit is None:
         folded = {name.casefold(): name for name in reversed(_COMMON)}
