@@ -36,10 +36,15 @@ def _connect(path: Path, mode: str) -> sqlite3.Connection:
         check_same_thread=False,
     )
     connection.text_factory = _text
-    for pragma in ("foreign_keys=ON", "trusted_schema=OFF", "cell_size_check=ON"):
-        connection.execute(f"PRAGMA {pragma}")
+    pragmas = ["foreign_keys=ON", "trusted_schema=OFF", "cell_size_check=ON"]
     if mode == "mode=rw":
-        connection.execute("PRAGMA synchronous=FULL")
+        pragmas.append("synchronous=FULL")
+    try:
+        for pragma in pragmas:
+            connection.execute(f"PRAGMA {pragma}")
+    except BaseException:
+        connection.close()
+        raise
     return connection
 
 
@@ -93,32 +98,47 @@ class Store:
     def _translated(self) -> Iterator[None]:
         try:
             yield
-        except (SQLAlchemyError, sqlite3.Error) as error:
+        except (SQLAlchemyError, sqlite3.Error, UnicodeDecodeError) as error:
+            # The last: SQLite quotes damaged bytes in a message that Python cannot read as text.
             raise _explained(error, self.path) from error
 
     @contextmanager
     def reading(self) -> Iterator[Connection]:
         """A snapshot of the file for as long as the block lasts. Raises JournalError."""
-        with self._lock, self._translated():
-            self._begin = "BEGIN"
-            with self._connection.begin():
-                yield self._connection
+        with self._transaction("BEGIN") as connection:
+            yield connection
 
     @contextmanager
     def writing(self) -> Iterator[Connection]:
         """Durable when the block has ended without an exception. Raises JournalError."""
+        with self._transaction("BEGIN IMMEDIATE") as connection:
+            yield connection
+
+    @contextmanager
+    def _transaction(self, begin: str) -> Iterator[Connection]:
         with self._lock, self._translated():
-            self._begin = "BEGIN IMMEDIATE"
-            with self._connection.begin():
-                yield self._connection
+            self._begin = begin
+            try:
+                with self._connection.begin():
+                    yield self._connection
+            except BaseException:
+                # A COMMIT that failed may leave SQLite inside the transaction; the next one must
+                # not find it there, nor ever commit what was not acknowledged.
+                raw = None if self._connection.closed else self._raw()
+                if raw is not None and raw.in_transaction:
+                    raw.rollback()
+                raise
 
     def pragma(self, text: str) -> Any:
         """The first value that ``PRAGMA text`` gives, outside any transaction."""
         with self._lock, self._translated():
-            raw = self._connection.connection.dbapi_connection
-            assert raw is not None
-            row = raw.execute(f"PRAGMA {text}").fetchone()
+            row = self._raw().execute(f"PRAGMA {text}").fetchone()
             return None if row is None else row[0]
+
+    def _raw(self) -> sqlite3.Connection:
+        raw: Any = self._connection.connection.dbapi_connection
+        assert isinstance(raw, sqlite3.Connection)
+        return raw
 
     def close(self) -> None:
         with self._lock, self._translated():
