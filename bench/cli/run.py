@@ -13,7 +13,6 @@ from bench.cli.output import (
     EXIT_NEGATIVE,
     EXIT_STOPPED,
     emit_json,
-
     report_error,
 )
 from bench.errors import EvenarmError, UsageError
@@ -163,7 +162,7 @@ def new_session(
 
 
 def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool) -> None:
-    from bench.procedure.decide import result_quantities
+    from bench.procedure.results import result_quantities
 
     view = session.view()
     document: dict[str, Any] = {
@@ -224,6 +223,3 @@ def _lines(document: dict[str, Any]) -> list[str]:
     lines.append(f"  {'run':<22}{document['run']}")
     lines.append(f"  {'journal head':<22}{str(document['head'])[:16]}")
     return lines
-
-
-

@@ -1,4 +1,4 @@
-"""Follow a run in a plain terminal: one line for each thing that happens, questions as they come."""
+"""Follow a run in a plain terminal: a line for each thing that happens, questions as they come."""
 
 from __future__ import annotations
 
@@ -78,7 +78,7 @@ class Watcher:
         self._thread.join()
 
     def _put(self, question: Question) -> None:
-        """Ask at the terminal, in a thread of its own so that a stop need not wait for an answer."""
+        """Ask at the terminal, in a thread of its own: a stop need not wait for an answer."""
         note(f"\n{printable(question.title)}")
         for line in question.lines:
             note(f"  - {printable(line, 400)}")

@@ -13,8 +13,8 @@ from numpy.typing import NDArray
 from bench.fringes.model import Located
 from drivers.contracts import StageState
 
-from .decide import result_quantities
 from .live import LiveView, Question, StepState, StepView
+from .results import result_quantities
 from .scanning import Readings
 from .state import Event, RunState, Setup
 
@@ -107,9 +107,15 @@ class Board:
         newest = state.zeros[-1] if state.zeros else None
         verdict: Mapping[str, Any] = state.verdict or {}
         at_end = verdict.get("zero_m"), verdict.get("zero_u_m")
-        zero_m, zero_u_m = at_end if verdict else (newest.zero_m, newest.u_m) if newest else (
-            belief.mean_m,
-            None,
+        zero_m, zero_u_m = (
+            at_end
+            if verdict
+            else (newest.zero_m, newest.u_m)
+            if newest
+            else (
+                belief.mean_m,
+                None,
+            )
         )
         stage = seen.stage
         return LiveView(
@@ -188,7 +194,8 @@ def _thinned(parts: list[Readings]) -> tuple[FloatArray, FloatArray]:
         return x_m, signal
     groups = np.array_split(np.arange(signal.size), _DRAWN // 2)
     keep = sorted(
-        {int(g[np.argmin(signal[g])]) for g in groups} | {int(g[np.argmax(signal[g])]) for g in groups}
+        {int(g[np.argmin(signal[g])]) for g in groups}
+        | {int(g[np.argmax(signal[g])]) for g in groups}
     )
     return x_m[keep], signal[keep]
 

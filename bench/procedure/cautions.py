@@ -26,7 +26,7 @@ _EVERY_LASER = (
 _LASER: dict[str, str] = {
     "1": "Label says laser class 1. Do not open housings or defeat covers.",
     "1M": "Label says laser class 1M: do not view the beam with loupes, telescopes or microscopes.",
-    "1C": "Label says laser class 1C: only for the contact use it was made for, in its own housing.",
+    "1C": "Label says laser class 1C: only for the contact use it was made for, in its housing.",
     "2": "Label says laser class 2, visible: do not stare into the beam.",
     "2M": "Label says laser class 2M, visible: do not stare, and do not view with optical "
     "instruments.",
@@ -67,7 +67,7 @@ _STAGE = (
 def _source_lines(source: SourceSpec) -> Iterable[str]:
     label = printable(source.name, 60)
     if source.laser_class not in (None, "none"):
-        yield f"{label}: {_LASER[source.laser_class or ''] }"
+        yield f"{label}: {_LASER[source.laser_class or '']}"
     elif source.laser_class is None:
         yield f"{label}: {_LASER_UNKNOWN}"
     if source.laser_class in (None, "none"):

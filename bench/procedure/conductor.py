@@ -16,7 +16,7 @@ from bench.quantities import StagePosition
 from bench.spec.model import BenchSpec
 from drivers.contracts import DeviceError, StageState
 
-from . import decide as said
+from . import inputs as said
 from .board import Board
 from .decide import decide
 from .devices import Devices
@@ -308,7 +308,8 @@ class Conductor:
         return said.ScanEnded(state.position_m, readings.signal.size, mean_time_s, self._now())
 
     def _locate(self, body: Mapping[str, Any]) -> said.Input:
-        assert self._readings is not None and self.state.leg is not None
+        assert self._readings is not None
+        assert self.state.leg is not None
         source = self._sources[str(body["source"])]
         located = locate_readings(self._spec, source, self._readings)
         self._board.located(located)

@@ -7,137 +7,36 @@ next thing when nothing is outstanding.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass
+from dataclasses import asdict
 from typing import Any
 
-from bench.planning import plan_search
-from bench.planning.model import Leg
+from bench.planning import plan_search, scan_ends
+from bench.planning.model import Leg, Plan
 
 from .acceptance import combine, judge
+from .inputs import (
+    Answered,
+    Begin,
+    Continue,
+    Failed,
+    HomeEnded,
+    Input,
+    LocateEnded,
+    MoveEnded,
+    ScanEnded,
+    SourceReady,
+    StopAsked,
+    Stopped,
+)
+from .results import measurements, result_quantities
 from .state import Event, RunState, Setup
 from .text import ProcedureStep
 
-__all__ = [
-    "Answered",
-    "Begin",
-    "Continue",
-    "Failed",
-    "HomeEnded",
-    "Input",
-    "LocateEnded",
-    "MoveEnded",
-    "ScanEnded",
-    "SourceReady",
-    "StopAsked",
-    "Stopped",
-    "decide",
-]
+__all__ = ["MOST_LEGS", "MOST_RETURNS", "decide"]
 
 MOST_LEGS = 60
 MOST_RETURNS = 2
-
-
-# --- what can happen -------------------------------------------------------------------------------
-
-
-@dataclass(frozen=True)
-class Begin:
-    """The run begins; ``body`` is kept as it is. ``interrupted`` tells of an earlier run's crash."""
-
-    body: Mapping[str, Any]
-    interrupted: str
-    time_s: float
-
-
-@dataclass(frozen=True)
-class Continue:
-    time_s: float
-
-
-@dataclass(frozen=True)
-class Answered:
-    accepted: bool
-    by: str
-    time_s: float
-
-
-@dataclass(frozen=True)
-class SourceReady:
-    time_s: float
-
-
-@dataclass(frozen=True)
-class HomeEnded:
-    position_m: float
-    time_s: float
-
-
-@dataclass(frozen=True)
-class MoveEnded:
-    position_m: float
-    time_s: float
-
-
-@dataclass(frozen=True)
-class ScanEnded:
-    position_m: float
-    rows: int
-    mean_time_s: float
-    time_s: float
-
-
-@dataclass(frozen=True)
-class LocateEnded:
-    """``body`` says found, zero_m, zero_u_m, zero_time_s, reason and the other findings."""
-
-    body: Mapping[str, Any]
-    time_s: float
-
-
-@dataclass(frozen=True)
-class Failed:
-    """A device failed; the stage was told to stop and then said where it is, if it could."""
-
-    what: str
-    device: str
-    mend: str
-    position_m: float | None
-    position_known: bool
-    time_s: float
-
-
-@dataclass(frozen=True)
-class StopAsked:
-    by: str
-    reason: str
-    time_s: float
-
-
-@dataclass(frozen=True)
-class Stopped:
-    """The stage is at rest after a stop, or could not say."""
-
-    position_m: float | None
-    position_known: bool
-    reason: str
-    time_s: float
-
-
-Input = (
-    Begin
-    | Continue
-    | Answered
-    | SourceReady
-    | HomeEnded
-    | MoveEnded
-    | ScanEnded
-    | LocateEnded
-    | Failed
-    | StopAsked
-    | Stopped
-)
 
 
 # --- the decision -------------------------------------------------------------------------------
@@ -260,38 +159,6 @@ def _end(setup: Setup, state: RunState, outcome: str, reason: str) -> Event:
     return Event("run-ended", body)
 
 
-def result_quantities(setup: Setup, state: RunState) -> dict[str, Any]:
-    """The contract's quantities of a run's result, as far as they are known."""
-    result: dict[str, Any] = {}
-    if state.verdict is not None:
-        zero_m, u_m = float(state.verdict["zero_m"]), float(state.verdict["zero_u_m"])
-        result["residual_opd"] = _quantity(
-            state.verdict["residual_opd_m"] * 1e9, "nm", state.verdict["residual_u_m"] * 1e9
-        )
-    elif state.zeros:
-        newest = state.zeros[-1]
-        zero_m, u_m = newest.zero_m, newest.u_m
-    else:
-        zero_m = u_m = math.nan
-    if math.isfinite(zero_m):
-        result["zero"] = _quantity(zero_m * 1e6, "um", u_m * 1e6)
-    if state.findings is not None and "at_wavelength" in state.findings:
-        result["at_wavelength"] = state.findings["at_wavelength"]
-    if state.left_at_m is not None:
-        result["stage_left_at"] = _quantity(
-            state.left_at_m * 1e6, "um", setup.facts.resolution_m / math.sqrt(12.0) * 1e6
-        )
-    result["bench_time"] = _quantity(state.time_s - state.began_s, "s")
-    return result
-
-
-def _quantity(value: float, unit: str, uncertainty: float | None = None) -> dict[str, Any]:
-    document: dict[str, Any] = {"value": value, "unit": unit}
-    if uncertainty is not None:
-        document["standard_uncertainty"] = uncertainty
-    return document
-
-
 # --- going on -----------------------------------------------------------------------------------
 
 
@@ -320,7 +187,7 @@ def _continue(setup: Setup, state: RunState) -> tuple[Event, ...]:
         case "compare":
             return _compare(setup, state, step)
         case "record":
-            return (*_measurements(setup, state), Event("step-done", {}))
+            return (*measurements(setup, state), Event("step-done", {}))
         case _:
             raise AssertionError(f"unknown step kind {step.kind}")
 
@@ -347,11 +214,15 @@ def _question(setup: Setup, step: ProcedureStep, index: int) -> dict[str, Any]:
     return {"id": f"step-{index}", "kind": kind, "title": step.title, "lines": lines}
 
 
-def _search(setup: Setup, state: RunState) -> tuple[Event, ...]:
+def _plan(setup: Setup, state: RunState) -> Plan:
     assert state.belief is not None
+    return plan_search(setup.facts, state.belief, state.source, position_m=state.position_m)
+
+
+def _search(setup: Setup, state: RunState) -> tuple[Event, ...]:
     if state.legs_run >= MOST_LEGS:
         return _not_found(setup, state, f"{MOST_LEGS} scans were made without locating a packet")
-    plan = plan_search(setup.facts, state.belief, state.source)
+    plan = _plan(setup, state)
     if not plan.legs:
         seen = f"; the last scan says: {state.missed}" if state.missed else ""
         return _not_found(setup, state, "the packet is not where it was expected" + seen)
@@ -370,10 +241,9 @@ def _chosen(leg: Leg, expected_time_s: float) -> Event:
 
 
 def _scan(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ...]:
-    assert state.belief is not None
     if state.zero(step.name) is not None:
         return (Event("step-done", {}),)
-    plan = plan_search(setup.facts, state.belief, state.source)
+    plan = _plan(setup, state)
     final = next((leg for leg in plan.legs if leg.purpose == "final"), None)
     bracketed = bool(plan.legs) and plan.legs[0].purpose != "search"
     if not state.missed and final is not None and bracketed:
@@ -401,9 +271,13 @@ def _leg_on(setup: Setup, state: RunState, leg: Leg) -> tuple[Event, ...]:
     if state.source != leg.source:
         return _change_source(setup, leg)
     facts = setup.facts
-    start_m = run_up_m(setup, leg)
-    if state.at != "run-up":
-        return (_move(setup, state, start_m, "run-up", f"run-up for the scan with {leg.source}"),)
+    ends = scan_ends(facts, leg)
+    if state.at not in {"overshoot", "run-up"}:
+        why = f"overshoot before the scan with {leg.source}"
+        return (_move(setup, state, ends.overshoot_m, "overshoot", why),)
+    if state.at == "overshoot":
+        why = f"from the approach side to the start of the scan with {leg.source}"
+        return (_move(setup, state, ends.begin_m, "run-up", why),)
     step = setup.procedure.steps[state.step]
     body = {
         "scan": f"scan-{state.scans_run + 1}",
@@ -413,7 +287,7 @@ def _leg_on(setup: Setup, state: RunState, leg: Leg) -> tuple[Event, ...]:
         "purpose": leg.purpose,
         "start_m": leg.start_m,
         "stop_m": leg.stop_m,
-        "end_m": overrun_m(setup, leg, start_m),
+        "end_m": ends.end_m,
         "speed_m_s": leg.speed_m_s,
         "increment_m": leg.increment_m,
         "integration_s": facts.integration_s,
@@ -442,26 +316,6 @@ def _change_source(setup: Setup, leg: Leg) -> tuple[Event, ...]:
 def _within(setup: Setup, position_m: float) -> float:
     low_m, high_m = setup.facts.travel_m
     return min(max(position_m, low_m), high_m)
-
-
-def _ramp_m(setup: Setup, leg: Leg) -> float:
-    """Room to reach the sweep's speed, with a margin for the first read-backs."""
-    speed_m_s = leg.speed_m_s or 0.0
-    return 1.2 * speed_m_s**2 / (2.0 * setup.facts.acceleration_m_s2) + 0.1 * speed_m_s
-
-
-def run_up_m(setup: Setup, leg: Leg) -> float:
-    """Where a scan has to set off so that its data are all taken from the approach side."""
-    facts = setup.facts
-    room_m = facts.reversal_allowance_m + _ramp_m(setup, leg)
-    return _within(setup, leg.start_m - facts.approach * room_m)
-
-
-def overrun_m(setup: Setup, leg: Leg, from_m: float) -> float:
-    """Where a sweep's move ends: beyond the data, so that they end at full speed."""
-    facts = setup.facts
-    end_m = _within(setup, leg.stop_m + facts.approach * _ramp_m(setup, leg))
-    return from_m + _limited(end_m - from_m, facts.longest_move_m)
 
 
 def _limited(distance_m: float, most_m: float) -> float:
@@ -503,8 +357,10 @@ def _move_to_zero(setup: Setup, state: RunState) -> tuple[Event, ...]:
 
 def _compare(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ...]:
     first, second = (state.zero(name) for name in step.scans)
-    assert first is not None and second is not None
-    assert state.left_at_m is not None and state.left_at_s is not None
+    assert first is not None
+    assert second is not None
+    assert state.left_at_m is not None
+    assert state.left_at_s is not None
     verdict = judge(
         setup.accept,
         opd_per_m=setup.facts.opd_per_m,
@@ -517,28 +373,4 @@ def _compare(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event,
     return (
         Event("judged", asdict(verdict)),
         Event("step-done", {"passed": verdict.accepted}),
-    )
-
-
-def _measurements(setup: Setup, state: RunState) -> tuple[Event, ...]:
-    rows: list[tuple[str, dict[str, Any]]] = []
-    result = result_quantities(setup, state)
-    rows += [(name, result[name]) for name in ("zero", "residual_opd") if name in result]
-    if state.verdict is not None:
-        rows.append(("scans_differ_opd", _quantity(state.verdict["scans_differ_opd_m"] * 1e9, "nm")))
-    for name in ("contrast", "amplitude", "mean_wavelength"):
-        if state.findings is not None and name in state.findings:
-            rows.append((name, dict(state.findings[name])))
-    shared = {
-        "at_wavelength": result.get("at_wavelength"),
-        "scans": [zero.scan for zero in state.zeros],
-        "source": state.source,
-        "by": setup.by,
-    }
-    return tuple(
-        Event(
-            "measurement",
-            {"id": f"{setup.run}-{number}", "name": name, **quantity, **shared},
-        )
-        for number, (name, quantity) in enumerate(rows, 1)
     )

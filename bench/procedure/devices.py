@@ -46,7 +46,7 @@ def declared(kind: str, name: str) -> Driver | None:
 
 
 def parse_pace(text: str) -> float | None:
-    """"real" is 1, "fast" is None (time jumps), a number is so many times real."""
+    """ "real" is 1, "fast" is None (time jumps), a number is so many times real."""
     if text == "real":
         return 1.0
     if text == "fast":

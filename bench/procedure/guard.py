@@ -101,15 +101,17 @@ class Guard:
 
     def state(self) -> StageState:
         """Live read-back. Raises DeviceError."""
-        return self._port.call(lambda s: s.state(timeout_s=CALL_TIMEOUT_S), timeout_s=CALL_TIMEOUT_S)
+        return self._port.call(
+            lambda s: s.state(timeout_s=CALL_TIMEOUT_S), timeout_s=CALL_TIMEOUT_S
+        )
 
     # --- arming ---------------------------------------------------------------------------------
 
     def arm(self) -> StageState:
         """Make motion possible: limits given, read-back alive, and the stop answers.
 
-        Raises MotionRefused or DeviceError. The position may still be unknown: then only ``start_home``
-        is let through.
+        Raises MotionRefused or DeviceError. The position may still be unknown: then only
+        ``start_home`` is let through.
         """
         if self._spec.travel_m is None:
             raise self._error(("no motion without travel limits", "", "set [stage] travel"))

@@ -25,7 +25,7 @@ class StepView:
 
 @dataclass(frozen=True)
 class Question:
-    """Something only a person can answer. ``kind`` "acknowledge" wants a name; "confirm" yes or no."""
+    """Something only a person can answer: "acknowledge" wants a name, "confirm" yes or no."""
 
     id: str
     kind: Literal["acknowledge", "confirm"]

@@ -37,8 +37,8 @@ def left_open(entries: Iterable[Entry]) -> LeftOpen:
             runs.pop(entry.run, None)
         elif entry.kind in _INTENTS:
             why = (
-                f"Run {entry.run} began to move the stage (entry {entry.seq}, {entry.time_utc}) and "
-                "the journal does not say where that ended."
+                f"Run {entry.run} began to move the stage (entry {entry.seq}, {entry.time_utc}) "
+                "and the journal does not say where that ended."
             )
         elif entry.kind in _OUTCOMES:
             known = entry.body.get("position_known", True)

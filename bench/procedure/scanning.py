@@ -1,7 +1,7 @@
 """Perform one scan: a sweep read while the stage moves, or steps read at rest.
 
 Each reading is given the stage position that belongs to it: the read-backs on both sides of it,
-taken at the bench times they carry, smoothed over a short stretch and shifted by the detector's lag.
+taken at the bench times they carry, smoothed over a short stretch, shifted by the detector's lag.
 """
 
 from __future__ import annotations

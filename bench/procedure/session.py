@@ -199,7 +199,8 @@ class RunSession:
 
         A run that ended before the stage was homed leaves them open, so that the next asks again.
         """
-        assert self._journal is not None and self._conductor is not None
+        assert self._journal is not None
+        assert self._conductor is not None
         if self._left_open.why and not self._conductor.state.position_known:
             return
         for run in self._left_open.runs:
@@ -215,7 +216,7 @@ class RunSession:
         if self._journal is not None:
             self._journal.close()
 
-    # --- what a screen asks (bench.tui.control.RunControl) ------------------------------------------
+    # --- what a screen asks (bench.tui.control.RunControl) -----------------------------------
 
     @property
     def run_id(self) -> str:

@@ -69,7 +69,7 @@ class RunState:
     source: str | None = None
     position_m: float | None = None
     position_known: bool = False
-    at: str = ""  # the role of the last position reached: "run-up", "approach", "zero" or ""
+    at: str = ""  # the role of the last position reached, such as "run-up" or "zero"
     leg: Leg | None = None
     legs_run: int = 0
     went_back: int = 0
@@ -191,7 +191,8 @@ def _leg_chosen(_setup: Setup, state: RunState, body: Body) -> RunState:
 
 def _located(setup: Setup, state: RunState, body: Body) -> RunState:
     leg, belief = state.leg, state.belief
-    assert leg is not None and belief is not None
+    assert leg is not None
+    assert belief is not None
     state = replace(state, pending=None, leg=None)
     if not body["found"]:
         belief = belief.missed(leg.start_m, leg.stop_m, leg.detection_probability)

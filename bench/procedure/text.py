@@ -107,7 +107,7 @@ def _check(table: Mapping[str, Any], keys: Mapping[str, _Key], path: str) -> lis
                 problems.append(Problem(f"{path}{word}", "(missing)", key.what or _one_of(key)))
             continue
         value: Any = table[word]
-        if type(value) is not key.kind:
+        if value.__class__ is not key.kind:
             problems.append(Problem(f"{path}{word}", repr(value), key.what or _one_of(key)))
         elif key.allowed and value not in key.allowed:
             near = _nearest(value, key.allowed)
@@ -160,7 +160,9 @@ def _check_order(steps: list[dict[str, Any]]) -> list[Problem]:
             if len(step["scans"]) != 2:
                 problems.append(Problem(f"{path}.scans", repr(step["scans"]), "must name two"))
             problems += [
-                Problem(f"{path}.scans", repr(name), "is no earlier scan", _nearest(name, (*scans,)))
+                Problem(
+                    f"{path}.scans", repr(name), "is no earlier scan", _nearest(name, (*scans,))
+                )
                 for name in step["scans"]
                 if name not in scans
             ]
@@ -202,7 +204,9 @@ def load_procedure(path: Path, *, shipped: bool) -> Procedure:
         if not problems:
             problems += _check_order(steps)
     if not problems and table["name"] != path.stem:
-        problems.append(Problem("name", repr(table["name"]), f"must be the file's own, {path.stem}"))
+        problems.append(
+            Problem("name", repr(table["name"]), f"must be the file's own, {path.stem}")
+        )
     if problems:
         raise SpecError(
             "the procedure cannot be used", where=where, problems=tuple(problems), mend=mend
