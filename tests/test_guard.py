@@ -164,7 +164,7 @@ def test_after_a_stop_nothing_moves_until_armed_again(bench):
 
 
 def test_a_stop_that_comes_while_a_move_waits_in_the_queue_wins(bench):
-    """The move is asked about again in the owner's thread, just before it would reach the device."""
+    """The move is asked about again in the owner's thread, just before it reaches the device."""
     bench.guard.arm()
     asked = bench.stage.state
 

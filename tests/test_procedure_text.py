@@ -1,4 +1,4 @@
-"""Procedures as they are written: every fault of a file at once, and nothing overridden silently."""
+"""Procedures as written: every fault of a file at once, and nothing overridden silently."""
 
 from __future__ import annotations
 
