@@ -13,6 +13,7 @@ __all__ = [
     "leg_time",
     "longest_scan",
     "move_time",
+    "ramp_m",
     "readings_of",
     "return_time",
     "scan_ends",
@@ -46,12 +47,17 @@ def move_time(facts: BenchFacts, distance_m: float) -> float:
     return time
 
 
+def ramp_m(facts: BenchFacts, speed_m_s: float) -> float:
+    """Room to reach a sweep's speed, with a margin and a tenth of a second for read-backs."""
+    return 1.2 * speed_m_s**2 / (2.0 * facts.acceleration_m_s2) + 0.1 * speed_m_s
+
+
 def longest_scan(facts: BenchFacts, speed_m_s: float) -> float:
     """Longest scan, from start to stop, that one command allows with its run-up and run-out.
 
     At least half the longest move: where the allowances would take more, they are cut instead.
     """
-    ramp = speed_m_s**2 / (2.0 * facts.acceleration_m_s2)
+    ramp = ramp_m(facts, speed_m_s)
     room = facts.longest_move_m - facts.reversal_allowance_m - 2.0 * ramp
     return max(room, facts.longest_move_m / 2.0)
 
@@ -81,7 +87,7 @@ def scan_ends(facts: BenchFacts, leg: Leg) -> ScanEnds:
 def scan_ends_at(
     facts: BenchFacts, start_m: float, stop_m: float, speed_m_s: float | None
 ) -> ScanEnds:
-    ramp = 0.0 if speed_m_s is None else speed_m_s**2 / (2.0 * facts.acceleration_m_s2)
+    ramp = 0.0 if speed_m_s is None else ramp_m(facts, speed_m_s)
     room = max(facts.longest_move_m - abs(stop_m - start_m), 0.0)
     run_up = min(ramp, room / 2.0)
     run_out = min(ramp, room / 2.0)

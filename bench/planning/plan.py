@@ -7,6 +7,7 @@ answers with the best legs from there; the caller carries out the first.
 from __future__ import annotations
 
 import itertools
+import math
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -72,6 +73,7 @@ class _Task:
     reachable: float
     cells: Cells  # in approach coordinates
     final: SourceFacts
+    least_mean_length: float
     ordered: dict[str, list[tuple[tuple[Segment, ...], FloatArray]]] = field(default_factory=dict)
 
     def orders(self, source: SourceFacts, way: Way) -> list[tuple[tuple[Segment, ...], FloatArray]]:
@@ -126,6 +128,7 @@ def plan_search(
         reachable=reachable,
         cells=cells,
         final=final,
+        least_mean_length=cells.least_mean_length(),
     )
     routes = _routes(task, ranked)
     if not routes:
@@ -176,16 +179,46 @@ def _routes(task: _Task, ranked: list[SourceFacts]) -> list[tuple[tuple[SourceFa
     if task.careful and others:
         # The source in use saw nothing there; another may.
         usable = others
-    routes = []
+    direct = _direct(task)
+    if direct is not None and _narrow(task):
+        return [((), direct)]
+    routes: list[tuple[tuple[SourceFacts, ...], _Route]] = []
+    if direct is not None:
+        routes.append(((), direct))
+    chains = []
     for count in range(1, len(usable) + 1):
         for chain in itertools.combinations(usable, count):
             rest = _rest(task, chain)
             if rest is not None:
-                routes += [(chain, _searched(task, chain, rest))]
-    direct = _direct(task)
-    if direct is not None:
-        routes.append(((), direct))
+                chains.append((_least(task, chain, rest), chain, rest))
+    # The white light alone is always worked out, because the plan is compared with it.
+    for least, chain, rest in sorted(chains, key=lambda item: item[0]):
+        best = min((route.expected_s for _, route in routes), default=math.inf)
+        if least < best or chain == (task.final,):
+            routes.append((chain, _searched(task, chain, rest)))
     return routes
+
+
+def _narrow(task: _Task) -> bool:
+    """Whether the belief is so narrow that nothing but the final scan makes sense.
+
+    Either the final scan would be hardly longer than its packet needs, or the belief is as narrow
+    as unknown glass lets a search make it, and a further search would only find the same again.
+    """
+    low, high = task.belief.interval(WINDOW_LEVEL)
+    packet = 2.0 * FINAL_ROOM * packet_fwhm_m(task.facts, task.final)
+    return high - low < max(2.0 * packet, 3.0 * WINDOW_SDS * task.facts.glass_shift_m)
+
+
+def _least(task: _Task, chain: tuple[SourceFacts, ...], rest: tuple[Leg, ...]) -> float:
+    """A time that no route of this chain beats: no travel, no ramps, thickest belief first."""
+    way = search_way(task.facts, chain[0], careful=task.careful)
+    assert way is not None
+    scanning = task.least_mean_length * way.time_per_metre(task.facts)
+    overshoot = scan_ends(task.facts, rest[0]).overshoot_m
+    after = sum(leg.expected_time_s for leg in _timed(task, rest, overshoot, chain[0].name))
+    seen = task.reachable * way.detection_probability
+    return change_time(chain[0], task.current) + 0.99 * scanning + seen * 0.99 * after
 
 
 # --- the legs that follow a detection ------------------------------------------------------------

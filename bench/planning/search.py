@@ -23,7 +23,7 @@ _DONE = 1e-3  # of the reachable belief may stay unscanned
 _THIN = 0.01  # density, over the densest in the window, below which a window's ends are cut
 _MOST_SEGMENTS = 40
 _PARTS = (1.0, 0.5, 0.25, 0.1)  # of the longest scan
-_STARTS = 96
+_STARTS = 64
 
 
 @dataclass(frozen=True)
@@ -38,13 +38,35 @@ class Cells:
 
     def cleared(self, start: float, stop: float) -> Cells:
         """The same without what lies between start and stop."""
-        inner = np.array([start, stop])
-        inner = inner[(inner > self.edges[0]) & (inner < self.edges[-1])]
-        edges = np.union1d(self.edges, inner)
-        summed = np.interp(edges, self.edges, self.cumulative())
-        middle = (edges[1:] + edges[:-1]) / 2.0
-        mass = np.where((middle > start) & (middle < stop), 0.0, np.diff(summed))
-        return Cells(edges, mass)
+        first = int(np.searchsorted(self.edges, start, side="right"))
+        last = int(np.searchsorted(self.edges, stop, side="left"))
+        density = self.mass / np.diff(self.edges)
+        left = self.edges[:first] if first else np.array([start])
+        right = self.edges[last:] if last < self.edges.size else np.array([stop])
+        # Cells that the window cuts keep the part outside it; the window itself is one empty cell.
+        edges, mass = [left], [self.mass[: max(first - 1, 0)]]
+        if first and left[-1] < start:
+            edges.append(np.array([start]))
+            mass.append(np.array([density[first - 1] * (start - left[-1])]))
+        mass.append(np.array([0.0]))
+        if last < self.edges.size and right[0] > stop:
+            edges.append(np.array([stop]))
+            mass.append(np.array([density[last - 1] * (right[0] - stop)]))
+        edges.append(right)
+        mass.append(self.mass[last:])
+        return Cells(np.concatenate(edges), np.concatenate(mass))
+
+    def flat(self) -> bool:
+        """Whether all cells that hold something are equally dense."""
+        density = (self.mass / np.diff(self.edges))[self.mass > 0.0]
+        return bool(np.max(density) < 1.02 * np.min(density))
+
+    def least_mean_length(self) -> float:
+        """Length that any search looks through on average, in units of the mass: thickest first."""
+        width = np.diff(self.edges)
+        order = np.argsort(-self.mass / width)
+        through = np.cumsum(width[order]) - width[order] / 2.0
+        return float(np.sum(through * self.mass[order]))
 
     def within(self, start: float, stop: float) -> tuple[float, float]:
         """Mass between start and stop, and its centroid (the middle where there is none)."""
@@ -96,16 +118,17 @@ def orders(
     low, high = sorted(facts.approach * end for end in facts.travel_m)
     longest = longest_scan(facts, way.speed_m_s or facts.speed_m_s)
     margin = min(packet_fwhm_m, longest / 4.0)
-    support = _support(cells)
+    thick = _trimmed(cells)
+    flat, support = thick.flat(), _support(thick)
     found: list[tuple[Segment, ...]] = []
     for part in _PARTS:
         length = part * (longest - 2.0 * margin)
         if part < 1.0 and (support > _MOST_SEGMENTS * length or length < 2.0 * margin):
             continue
         task = _Task(facts, way, margin, (low, high), length)
-        candidates = [_in_turn(task, cells)]
-        if support <= 4.0 * _MOST_SEGMENTS * length:
-            candidates.append(_thickest_first(task, cells, position))
+        candidates = [_in_turn(task, thick)]
+        if not flat:
+            candidates.append(_thickest_first(task, thick, position))
         found += [order for order in candidates if order and order not in found]
     return found
 
@@ -133,7 +156,7 @@ def _regions(cells: Cells) -> list[tuple[float, float]]:
 
 
 def _in_turn(task: _Task, cells: Cells) -> tuple[Segment, ...]:
-    left = _trimmed(cells)
+    left = cells
     segments: list[Segment] = []
     while regions := _regions(left):
         begin, end = regions[0]
@@ -152,7 +175,7 @@ def _in_turn(task: _Task, cells: Cells) -> tuple[Segment, ...]:
 
 
 def _thickest_first(task: _Task, cells: Cells, position: float) -> tuple[Segment, ...]:
-    left = _trimmed(cells)
+    left = cells
     enough = _DONE * float(np.sum(left.mass))
     segments: list[Segment] = []
     while float(np.sum(left.mass)) > enough and len(segments) < 8 * _MOST_SEGMENTS:
@@ -170,7 +193,7 @@ def _best_window(task: _Task, cells: Cells, position: float) -> tuple[float, flo
     held = np.flatnonzero(cells.mass > 0.0)
     regions = _regions(cells)
     thinned = held[:: max(1, held.size // _STARTS)]
-    lengths = task.longest * np.array([1.0, 0.5, 0.25])
+    lengths = task.longest * np.array([1.0, 0.5])
     edges = [cells.edges[thinned], np.array([begin for begin, _ in regions])]
     edges += [np.array([end for _, end in regions]) - length for length in lengths]
     begins = np.concatenate(edges)
