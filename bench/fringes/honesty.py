@@ -50,7 +50,9 @@ def noise_shares(
         active = [0, 1, 2]
         while True:
             part = columns[:, active] * weight[:, None]
-            solved, *_ = np.linalg.lstsq(part, square * weight, rcond=1e-10)
+            gram = part.T @ part
+            gram += 1e-10 * np.trace(gram) * np.eye(len(active))
+            solved = np.linalg.solve(gram, part.T @ (square * weight))
             if len(active) == 1 or bool(np.all(solved >= 0.0)):
                 break
             active.pop(int(np.argmin(solved)))

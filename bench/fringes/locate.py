@@ -13,8 +13,6 @@ from bench.fringes.detect import (
     search_band,
     search_blind,
 )
-from bench.fringes.dispersion import Dispersion, of_glass, second_order
-from bench.fringes.honesty import covariance, noise_shares
 from bench.fringes.model import (
     BoolArray,
     Estimate,
@@ -27,15 +25,12 @@ from bench.fringes.model import (
 )
 from bench.fringes.notices import at_the_edge, notices_of
 from bench.fringes.results import Solution
+from bench.fringes.solve import solve
 from bench.fringes.trend import flat_tops, lone_spikes, robust_spread, slow_level
 from bench.fringes.verdict import EVERYWHERE, judge
 from bench.fringes.window import Window, settle
-from bench.fringes.zero import PacketFit, fit_packet
 
 LEAST_READINGS = 24
-BEND_PRIOR = 6.0  # standard deviation of a prior on dispersion: 3 rad at the rms half-width
-ROUNDS = 3
-OUTLIER = 6.0
 
 
 def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
@@ -67,7 +62,7 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
             notices.append(Notice("monochromatic", reason))
         weakest = _weakest_contrast(candidate, signal, scan.dark)
         return _refused(reason, false_alarm, notices, flat, weakest)
-    solution = _solve(u, signal, window, known, per_m)
+    solution = solve(u, signal, window, known, per_m)
     return _result(scan, known, u, signal, window, solution, false_alarm, notices, middle, span)
 
 
@@ -103,73 +98,6 @@ def _candidate(
     flat = signal - slow_level(u, signal, 4.0 * ENVELOPE_FWHM / (band[1] - band[0]))
     tries = [search_band(u, flat, band[0], band[1], stretch) for stretch in (1.0, 2.0)]
     return min(tries, key=lambda found: (found.false_alarm, -found.excess)), flat
-
-
-def _dispersion(
-    known: Knowledge, reference: float, scale: float, per_m: float | None
-) -> Dispersion:
-    if known.glass is not None and per_m is not None:
-        return of_glass(known.glass, reference, scale, per_m)
-    return second_order(reference, scale, per_m)
-
-
-def _first_guesses(
-    window: Window, dispersion: Dispersion, reference: float
-) -> list[tuple[float, float]]:
-    """(shift, bend): from the envelope's maximum, and from the spectrum's phase."""
-    fit = window.fit
-    peak = window.peak - fit.origin
-    guesses = [(peak, 0.0)]
-    turned = fit.c * np.exp(2j * np.pi * fit.frequency * peak)
-    phase = np.unwrap(np.angle(turned))
-    away = fit.frequency - reference
-    columns = np.stack([np.ones_like(away), away, dispersion.curve(fit.frequency)], axis=1)
-    size = np.abs(fit.c)[:, None]
-    solved, *_ = np.linalg.lstsq(columns * size, phase * size[:, 0], rcond=1e-9)
-    guesses.append((peak - float(solved[1]) / (2.0 * math.pi), float(solved[2])))
-    return guesses
-
-
-def _solve(
-    u: FloatArray, signal: FloatArray, window: Window, known: Knowledge, per_m: float | None
-) -> Solution:
-    """The nonlinear fit, repeated with the weights that its own residuals ask for."""
-    part, values = u[window.first : window.stop], signal[window.first : window.stop]
-    start = window.fit
-    power = np.abs(start.c) ** 2
-    reference = float(np.sum(np.sqrt(power) * start.frequency) / np.sum(np.sqrt(power)))
-    rms = math.sqrt(float(np.sum(power * (start.frequency - reference) ** 2) / np.sum(power)))
-    scale = max(rms, 1e-3 * reference)
-    stated = known.at_wavelength_m is not None and per_m is not None
-    if known.at_wavelength_m is not None and per_m is not None:
-        reference = per_m / known.at_wavelength_m
-    weight = np.ones(part.size)
-    guesses: list[tuple[float, float]] = []
-    for turn in range(ROUNDS):
-        dispersion = _dispersion(known, reference, scale, per_m)
-        if turn == 0:
-            guesses = _first_guesses(window, dispersion, reference)
-        fits = [
-            fit_packet(part, values, weight, start, reference, dispersion, BEND_PRIOR, guess)
-            for guess in guesses
-        ]
-        fit = min(fits, key=lambda done: _cost(done, weight))
-        shares = noise_shares(fit.residual, fit.leverage, fit.slope, fit.fringes)
-        variance = shares.variance(fit.slope, fit.fringes)
-        variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
-        far = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
-        weight = np.where(far, 1e-6, 1.0) / variance
-        weight = weight / float(np.mean(weight))
-        solution = Solution(fit, covariance(fit, variance), shares)
-        mean, _ = solution.mean_frequency()
-        guesses = [(fit.shift, fit.bend)]
-        if not stated:
-            reference = mean
-    return solution
-
-
-def _cost(fit: PacketFit, weight: FloatArray) -> float:
-    return float(np.sum(weight * fit.residual**2)) / (1.0 if fit.converged else 0.8)
 
 
 def _result(

@@ -59,7 +59,7 @@ def notices_of(
         found.append(Notice("undersampled", text))
     slope_rms = math.sqrt(float(np.mean(fit.slope**2)))
     by_position = shares.position * slope_rms
-    if by_position > 2.0 * math.hypot(shares.detector, 1e-3 * amplitude.value):
+    if solution.ruled or by_position > 2.0 * math.hypot(shares.detector, 1e-3 * amplitude.value):
         share = shares.position * mean
         text = f"readings scatter as if positions did, by {share:.2g} of a fringe"
         found.append(Notice("position-noise", text))

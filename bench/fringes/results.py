@@ -27,6 +27,7 @@ class Solution:
     fit: PacketFit
     covariance: FloatArray
     shares: NoiseShares
+    ruled: bool = False  # whether positions were corrected by the fringes' own phase
 
     def mean_frequency(self) -> tuple[float, FloatArray]:
         """Amplitude-weighted mean frequency and its gradient for the amplitudes (k,)."""

@@ -60,8 +60,8 @@ def lone_spikes(signal: FloatArray, limit: float = 8.0) -> BoolArray:
     """Single readings far from all their neighbours, in the order of position.
 
     A reading is a spike where it leaves the range of its four neighbours by more than ``limit``
-    times the usual excess of such excursions and by more than that range itself. Fringes, sampled
-    finely or coarsely, stay comparable with their neighbours; a spike does not.
+    times the usual distance from them, here and in the whole scan, and by more than twice that
+    range. Fringes, sampled finely or coarsely, stay comparable with their neighbours.
     """
     n = signal.size
     marked = np.zeros(n, dtype=bool)
@@ -71,7 +71,12 @@ def lone_spikes(signal: FloatArray, limit: float = 8.0) -> BoolArray:
     near = np.stack([padded[0:n], padded[1 : n + 1], padded[3 : n + 3], padded[4 : n + 4]])
     high, low = near.max(axis=0), near.min(axis=0)
     outside = np.maximum(signal - high, low - signal)
-    scale = robust_spread(signal - np.median(near, axis=0))
+    apart = np.abs(signal - np.median(near, axis=0))
+    size = 24
+    blocks = np.pad(apart, (0, -n % size), mode="edge").reshape(-1, size)
+    here = np.repeat(np.median(blocks, axis=1), size)[:n]
+    scale = 1.4826 * np.maximum(here, np.median(apart))
     return np.asarray(
-        (outside > limit * max(scale, 1e-300)) & (outside > 1.5 * (high - low)), dtype=np.bool_
+        (outside > limit * np.maximum(scale, 1e-300)) & (outside > 2.0 * (high - low)),
+        dtype=np.bool_,
     )

@@ -44,10 +44,12 @@ def fit_linear(
     level_columns = polynomial(x, TREND_ORDER)
     design = np.hstack([level_columns, harmonics(x - origin, frequency)])
     root = np.sqrt(weight)
-    left, scale, right = np.linalg.svd(design * root[:, None], full_matrices=False)
-    keep = scale > 1e-6 * scale[0]
-    left, scale, right = left[:, keep], scale[keep], right[keep]
-    solution = right.T @ ((left.T @ (signal * root)) / scale)
+    weighted = design * root[:, None]
+    size, vectors = np.linalg.eigh(weighted.T @ weighted)
+    keep = size > 1e-10 * size[-1]
+    half = vectors[:, keep] / np.sqrt(size[keep])
+    left = weighted @ half
+    solution = half @ (left.T @ (signal * root))
     k, p = frequency.size, TREND_ORDER + 1
     return LinearFit(
         origin=origin,
@@ -106,6 +108,14 @@ class PacketFit:
         return np.asarray(np.exp(2j * np.pi * np.outer(u, self.frequency)) @ c, dtype=np.complex128)
 
 
+def _least_squares(columns: FloatArray, values: FloatArray) -> FloatArray:
+    """Least squares by normal equations, leaving out directions that the readings do not hold."""
+    size, vectors = np.linalg.eigh(columns.T @ columns)
+    keep = size > 1e-11 * size[-1]
+    part = vectors[:, keep]
+    return np.asarray(part @ ((part.T @ (columns.T @ values)) / size[keep]), dtype=np.float64)
+
+
 def fit_packet(
     x: FloatArray,
     signal: FloatArray,
@@ -149,7 +159,7 @@ def fit_packet(
         angle = carrier + theta_of(values)
         cosine, sine = np.cos(angle), np.sin(angle)
         columns = np.hstack([levels, cosine])
-        solution, *_ = np.linalg.lstsq(columns * root[:, None], signal * root, rcond=1e-7)
+        solution = _least_squares(columns * root[:, None], signal * root)
         return cosine, sine, solution, signal - columns @ solution
 
     cosine, sine, solution, residual = linear_part(tail)
@@ -192,10 +202,11 @@ def fit_packet(
     jacobian = np.hstack([levels, cosine, phases]) * root[:, None]
     full = np.vstack([jacobian, np.zeros((1, p + k + 3))])
     full[-1, -1] = prior_root
-    left, size, right = np.linalg.svd(full, full_matrices=False)
-    keep = size > 1e-8 * size[0]
-    inverse = (right[keep].T / size[keep]) @ left[:, keep].T
-    gain = inverse[:, :-1] * root[None, :]
+    size, vectors = np.linalg.eigh(full.T @ full)
+    keep = size > 1e-12 * size[-1]
+    half = vectors[:, keep] / np.sqrt(size[keep])
+    left = full @ half
+    gain = (half @ left.T)[:, :-1] * root[None, :]
     gain[-3:] *= units[:, None]
     amplitude = solution[p:]
     if float(np.sum(amplitude)) < 0.0:
@@ -216,7 +227,7 @@ def fit_packet(
         fringes=cosine @ solution[p:],
         slope=slope,
         residual=residual,
-        leverage=np.einsum("ij,ij->i", left[:-1, keep], left[:-1, keep]),
+        leverage=np.einsum("ij,ij->i", left[:-1], left[:-1]),
         gain=gain,
         freedom=x.size - int(keep.sum()),
         converged=converged,

@@ -1,0 +1,127 @@
+"""The fit repeated until its weights, its reference and its positions agree with its residuals."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+
+import numpy as np
+
+from bench.fringes.dispersion import Dispersion, of_glass, second_order
+from bench.fringes.honesty import covariance, noise_shares
+from bench.fringes.model import FloatArray, Knowledge
+from bench.fringes.results import Solution
+from bench.fringes.ruler import slow_position_error
+from bench.fringes.window import Window
+from bench.fringes.zero import LinearFit, PacketFit, fit_linear, fit_packet
+
+BEND_PRIOR = 6.0  # standard deviation of a prior on dispersion: 3 rad at the rms half-width
+NO_BEND = 1e-6
+ROUNDS = 3
+RULER_ROUNDS = 8
+OUTLIER = 6.0
+
+
+def solve(
+    u: FloatArray, signal: FloatArray, window: Window, known: Knowledge, per_m: float | None
+) -> Solution:
+    """The packet in ``window`` of the sorted readings (u, signal); ``per_m`` is OPD a unit of u."""
+    part, values = u[window.first : window.stop], signal[window.first : window.stop]
+    solution = _rounds(part, values, window.fit, window.peak, known, per_m, BEND_PRIOR)
+    error = slow_position_error(part, solution.fit)
+    if error is None:
+        return solution
+    fit = solution.fit
+    even = np.ones(part.size)
+    for turn in range(RULER_ROUNDS):
+        last = turn == RULER_ROUNDS - 1
+        ruled = part + error
+        start = fit_linear(ruled, values, fit.origin, fit.frequency, even)
+        peak = fit.origin + solution.fit.shift
+        solution = _rounds(ruled, values, start, peak, known, per_m, NO_BEND, ROUNDS if last else 1)
+        if last:
+            break
+        more = slow_position_error(ruled, solution.fit, again=True)
+        if more is not None:
+            error = error + more
+    return replace(solution, ruled=True)
+
+
+def _dispersion(
+    known: Knowledge, reference: float, scale: float, per_m: float | None
+) -> Dispersion:
+    if known.glass is not None and per_m is not None:
+        return of_glass(known.glass, reference, scale, per_m)
+    return second_order(reference, scale, per_m)
+
+
+def _first_guesses(
+    fit: LinearFit, peak: float, dispersion: Dispersion, reference: float
+) -> list[tuple[float, float]]:
+    """(shift, bend): from the envelope's maximum, and from the spectrum's phase."""
+    peak = peak - fit.origin
+    guesses = [(peak, 0.0)]
+    turned = fit.c * np.exp(2j * np.pi * fit.frequency * peak)
+    phase = np.unwrap(np.angle(turned))
+    away = fit.frequency - reference
+    columns = np.stack([np.ones_like(away), away, dispersion.curve(fit.frequency)], axis=1)
+    size = np.abs(fit.c)[:, None]
+    solved, *_ = np.linalg.lstsq(columns * size, phase * size[:, 0], rcond=1e-9)
+    guesses.append((peak - float(solved[1]) / (2.0 * math.pi), float(solved[2])))
+    return guesses
+
+
+def _rounds(
+    part: FloatArray,
+    values: FloatArray,
+    start: LinearFit,
+    peak: float,
+    known: Knowledge,
+    per_m: float | None,
+    bend_prior: float,
+    rounds: int = ROUNDS,
+) -> Solution:
+    power = np.abs(start.c) ** 2
+    reference = float(np.sum(np.sqrt(power) * start.frequency) / np.sum(np.sqrt(power)))
+    rms = math.sqrt(float(np.sum(power * (start.frequency - reference) ** 2) / np.sum(power)))
+    scale = max(rms, 1e-3 * reference)
+    stated = known.at_wavelength_m is not None and per_m is not None
+    if known.at_wavelength_m is not None and per_m is not None:
+        reference = per_m / known.at_wavelength_m
+    weight = np.ones(part.size)
+    guesses: list[tuple[float, float]] = []
+    for turn in range(rounds):
+        dispersion = _dispersion(known, reference, scale, per_m)
+        if turn == 0:
+            guesses = _first_guesses(start, peak, dispersion, reference)
+            if bend_prior <= NO_BEND:
+                guesses = guesses[:1]
+        fits = [
+            fit_packet(part, values, weight, start, reference, dispersion, bend_prior, guess)
+            for guess in guesses
+        ]
+        fit = min(fits, key=lambda done: _cost(done, weight))
+        shares = noise_shares(fit.residual, fit.leverage, fit.slope, fit.fringes)
+        variance = shares.variance(fit.slope, fit.fringes)
+        variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
+        far = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
+        solution = Solution(fit, covariance(fit, variance), shares)
+        weight = np.where(far, 1e-6, 1.0) / variance
+        weight = weight / float(np.mean(weight))
+        guesses = [(fit.shift, fit.bend)]
+        mean, _ = solution.mean_frequency()
+        if not stated and turn < rounds - 1:
+            guesses = [(fit.shift - _delay(fit, mean), fit.bend)]
+            reference = mean
+    return solution
+
+
+def _delay(fit: PacketFit, frequency: float) -> float:
+    """Group delay that the dispersion found adds between the reference and ``frequency``."""
+    step = 1e-3 * float(fit.frequency[-1] - fit.frequency[0])
+    ends = fit.dispersion.curve(np.array([frequency - step, frequency + step]))
+    return fit.bend * float(ends[1] - ends[0]) / (2.0 * step) / (2.0 * math.pi)
+
+
+def _cost(fit: PacketFit, weight: FloatArray) -> float:
+    return float(np.sum(weight * fit.residual**2)) / (1.0 if fit.converged else 0.8)
