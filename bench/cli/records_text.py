@@ -28,9 +28,8 @@ def run_list(runs: Sequence[RunSummary], limit: int, head: Head, path: str) -> l
         )
         by = f", by {_clean(run.operator)}" if run.operator else ""
         simulated = " (simulated)" if run.simulated else ""
-        lines.append(
-            _cut(f"    {_clean(run.procedure)} on {_clean(run.bench_name)}{simulated}{by}")
-        )
+        on = f" on {_clean(run.bench_name)}" if run.bench_name else ""
+        lines.append(_cut(f"    {_clean(run.procedure)}{on}{simulated}{by}"))
     if not runs:
         lines.append("No runs yet.")
     elif len(runs) > limit:

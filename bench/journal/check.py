@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import re
 from collections.abc import Callable
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -40,6 +41,19 @@ class _Findings:
     def all(self) -> tuple[str, ...]:
         more = (f"and {self._more} more problems",) if self._more else ()
         return (*self.problems, *more)
+
+
+@dataclass
+class _Named:
+    """The blocks that entries name, (entry, columns, rows) by name, and how far each scan is.
+
+    ``unread`` are entries that do not agree with their hash: what they named is not known, so their
+    blocks are not called unnamed on top of it.
+    """
+
+    blocks: dict[str, tuple[int, Any, Any]] = field(default_factory=dict)
+    scans: dict[tuple[str | None, str], int] = field(default_factory=dict)
+    unread: set[int] = field(default_factory=set)
 
 
 def verify_journal(
@@ -102,13 +116,12 @@ def _check_chain(
     found: _Findings,
     missing: set[str],
     progress: Callable[[int, int], None] | None,
-) -> tuple[int, str, dict[str, Entry]]:
+) -> tuple[int, str, _Named]:
     total = connection.execute(select(func.count()).select_from(ENTRIES)).scalar_one()
     prev, expected, done = GENESIS, 1, 0
-    named: dict[str, Entry] = {}
-    scans: dict[tuple[str | None, Any], int] = {}
-    rows = connection.execution_options(yield_per=500).execute(
-        select(ENTRIES).order_by(ENTRIES.c.seq)
+    named = _Named()
+    rows = connection.execute(
+        select(ENTRIES).order_by(ENTRIES.c.seq), execution_options={"yield_per": 500}
     )
     for row in rows:
         seq, sha256 = row[0], row[7]
@@ -118,10 +131,11 @@ def _check_chain(
             entry = checked_entry(tuple(row), path)
         except JournalDamaged as error:
             found.add(error.why)
+            named.unread.add(seq)
         else:
             _check_entry(entry, row, found)
             if entry.kind == "readings":
-                _check_readings(entry, found, named, scans)
+                _check_readings(entry, found, named)
         if row[6] != prev:
             found.add(f"entry {seq}: it does not name the entry before it")
         prev = sha256 if isinstance(sha256, str) else ""
@@ -151,47 +165,44 @@ def _check_entry(entry: Entry, row: Any, found: _Findings) -> None:
         found.add(f"entry {entry.seq}: its run is not in canonical form")
 
 
-def _check_readings(
-    entry: Entry,
-    found: _Findings,
-    named: dict[str, Entry],
-    scans: dict[tuple[str | None, Any], int],
-) -> None:
-    name = entry.body.get("block")
+def _check_readings(entry: Entry, found: _Findings, named: _Named) -> None:
+    body = entry.body
+    name, sequence = body.get("block"), body.get("sequence")
     if not isinstance(name, str):
         found.add(f"entry {entry.seq}: it names no block of readings")
         return
-    named.setdefault(name, entry)
-    scan = (entry.run, json.dumps(entry.body.get("scan")))
-    due = scans.get(scan, 0)
-    if entry.body.get("sequence") != due:
-        found.add(f"entry {entry.seq}: block {due} of its scan is due")
-    scans[scan] = due + 1
+    columns = body.get("columns")
+    named.blocks.setdefault(name, (entry.seq, columns, body.get("rows")))
+    scan = (entry.run, json.dumps(body.get("scan")))
+    due = named.scans.get(scan, 0)
+    if sequence != due:
+        found.add(f"entry {entry.seq}: block {due} of its scan is due, not {sequence}")
+    named.scans[scan] = (sequence if isinstance(sequence, int) else due) + 1
 
 
-def _check_blocks(connection: Connection, found: _Findings, named: dict[str, Entry]) -> None:
-    awaited = dict(named)
-    rows = connection.execution_options(yield_per=20).execute(
-        select(BLOCKS).order_by(BLOCKS.c.entry)
+def _check_blocks(connection: Connection, found: _Findings, named: _Named) -> None:
+    kept: set[str] = set()
+    rows = connection.execute(
+        select(BLOCKS).order_by(BLOCKS.c.entry), execution_options={"yield_per": 20}
     )
     for seq, name, data in rows:
-        entry = named.get(name) if isinstance(name, str) else None
-        if entry is None or entry.seq != seq:
+        by, columns, count = named.blocks.get(name if isinstance(name, str) else "", (0, [], 0))
+        if by != seq and seq not in named.unread:
             found.add(f"the block at entry {seq} is named by no entry")
-            continue
-        del awaited[name]
-        if not isinstance(data, bytes) or block_name(data) != name:
+        elif not isinstance(data, bytes) or block_name(data) != name:
             found.add(f"entry {seq}: its readings do not agree with their hash")
-            continue
-        try:
-            columns = decode_block(data)
-        except ValueError as error:
-            found.add(f"entry {seq}: {error}")
-            continue
-        rows_said = entry.body.get("rows")
-        if entry.body.get("columns") != list(columns) or any(
-            len(column) != rows_said for column in columns.values()
-        ):
+        elif by == seq and _shape(data) != (columns, count):
             found.add(f"entry {seq}: its readings are not the columns and rows that it says")
-    for entry in awaited.values():
-        found.add(f"entry {entry.seq}: its readings are missing")
+        if isinstance(name, str):
+            kept.add(name)
+    for name, (seq, _, _) in named.blocks.items():
+        if name not in kept:
+            found.add(f"entry {seq}: its readings are missing")
+
+
+def _shape(data: bytes) -> tuple[list[str], int] | None:
+    try:
+        columns = decode_block(data)
+    except ValueError:
+        return None
+    return list(columns), len(next(iter(columns.values()), ()))
