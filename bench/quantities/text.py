@@ -224,16 +224,13 @@ def show(value: float, standard_uncertainty: float | None, unit: str) -> str:
         return f"{_grouped(mantissa)}{e and f'e{int(exponent)}'}{tail}"
     exact = Decimal(f"{u:.1e}")  # two digits, and any carry from 9.96 to 10 done
     last = exact.adjusted() - 1  # power of ten of the last digit shown
-    highest = max(exact.adjusted(), Decimal(value).adjusted() if value else last)
-    shift = highest if last < -9 or highest > 9 else 0
-    last -= shift
-    scaled = Decimal(value).scaleb(-shift)
-    places = max(-last, 0)
-    step = Decimal(1).scaleb(last)
-    steps = (scaled / step).to_integral_value() if scaled.adjusted() - last < 27 else None
-    if steps is None:  # known to more digits than a float has
+    if value and Decimal(value).adjusted() - last > 17:  # known to more digits than a float has
         return f"{value!r}{tail}"
-    number = f"{steps * step if steps else Decimal(0):.{places}f}"
+    rounded = Decimal(value).scaleb(-last).to_integral_value().scaleb(last)
+    highest = max(exact.adjusted(), rounded.adjusted() if rounded else last)
+    shift = highest if last < -9 or highest > 9 else 0
+    places = max(shift - last, 0)
+    number = f"{rounded.scaleb(-shift) if rounded else Decimal(0):.{places}f}"
     size = exact.scaleb(-shift)
     inside = f"{size:.{places}f}" if places and size >= 1 else f"{int(size.scaleb(places))}"
     return f"{_grouped(number)}({inside}){f'e{shift}' if shift else ''}{tail}"

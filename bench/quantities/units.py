@@ -73,7 +73,6 @@ _PREFIXED = {
     "W": Unit(1.0, _dim("power")),
     "K": Unit(1.0, _dim("temperature")),
     "Pa": Unit(1.0, _dim("pressure")),
-    "bar": Unit(1e5, _dim("pressure")),
     "rad": Unit(1.0, _dim("angle")),
 }
 _PLAIN = {
@@ -82,10 +81,12 @@ _PLAIN = {
     "ppm": Unit(1.0, UNITLESS, over=1e6),
     "ppb": Unit(1.0, UNITLESS, over=1e9),
     "in": Unit(254.0, _dim("length"), over=1e4),
-    "mil": Unit(254.0, _dim("length"), over=1e7),
+    "thou": Unit(254.0, _dim("length"), over=1e7),
     "Å": Unit(1.0, _dim("length"), over=1e10),
     "min": Unit(60.0, _dim("time")),
     "h": Unit(3600.0, _dim("time")),
+    "bar": Unit(1e5, _dim("pressure")),
+    "mbar": Unit(1e2, _dim("pressure")),
     "deg": Unit(math.pi, _dim("angle"), over=180.0),
     "°": Unit(math.pi, _dim("angle"), over=180.0),
     "count": Unit(1.0, _dim("counts")),
@@ -110,7 +111,7 @@ _PREFIXES: dict[str, tuple[float, float]] = {  # times, over
 }
 _COMMON = tuple(
     """
-    nm um mm cm m pm in mil Å ms us ns s min h kHz MHz GHz THz Hz mm/s um/s nm/s m/s mm/s^2 m/s^2
+    nm um mm cm m pm in thou Å ms us ns s min h kHz MHz GHz THz Hz mm/s um/s nm/s m/s mm/s^2 m/s^2
     um/s^2 mV V uV nA uA mA A nW uW mW W counts rad mrad urad deg degC K mK Pa hPa kPa mbar % ppm
     fs fs^2 ps^2 1/m 1/cm 1/K ppm/K nm/min um/min
     """.split()  # noqa: SIM905

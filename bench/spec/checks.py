@@ -64,12 +64,6 @@ def path_factor(table: schema.Bench | None, raw: object, problems: Problems) -> 
             problems.add(
                 f"bench.{worded[0]}", raw[worded[0]], "path_factor says it already; keep one"
             )
-        if table.path_factor == 0:
-            allowed = "must not be zero: the stage would not change the path difference"
-            problems.add("bench.path_factor", raw["path_factor"], f"{allowed}; {field}")
-            return 1.0
-        if abs(table.path_factor) > 100:
-            problems.add("bench.path_factor", raw["path_factor"], f"is far too large; {field}")
         return table.path_factor
     if not worded:
         problems.missing("bench.path_factor", f"{field}; or moving_arm and increasing")

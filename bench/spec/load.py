@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 __all__ = ["FoundBench", "find_bench", "load_bench"]
 
 _MEND = "`evenarm new DIR` writes a complete bench.toml to start from"
+_MEND_WORLD = "name the file in [simulation] world; `evenarm new DIR` writes one"
 DeclaredOf = Callable[[str, str], Any]
 
 
@@ -85,7 +86,7 @@ def load_bench(
     checks.detector(tables.get("detector"), raw, problems)
     glass = checks.glass(tables, sources, problems)
     climate = _climate(tables, problems)
-    settings, drivers = _drivers(tables, declared, known_drivers, unit, problems)
+    settings, drivers = _drivers(raw, declared, known_drivers, unit, problems)
     simulation, world = _world(tables, raw, drivers, path, unit, seed, sources, problems)
     url = checks.records_url(tables.get("records"), path.parent, records_folder, problems)
     if problems.found:
@@ -153,35 +154,40 @@ def _climate(tables: Mapping[str, Any], problems: Problems) -> ClimateSpec | Non
 
 
 def _drivers(
-    tables: Mapping[str, Any],
+    raw: Mapping[str, Any],
     declared: DeclaredOf,
     known_drivers: Callable[[str], Sequence[str]] | None,
     unit: str,
     problems: Problems,
 ) -> tuple[dict[str, dict[str, Any]], dict[str, Declared]]:
-    """The settings of every device in the units declared, and the drivers, by kind."""
+    """The settings of every device in the units declared, and the drivers, by kind.
+
+    Looked for in the file as it is, so that a table with another fault hides none of these.
+    """
     from bench.spec.declarations import check_table
 
     settings: dict[str, dict[str, Any]] = {}
     drivers: dict[str, Declared] = {}
     for kind in ("stage", "detector", "changer", "climate"):
-        table = tables.get(kind)
-        if table is None or table.driver is None:
+        table = raw.get(kind)
+        name = table.get("driver") if isinstance(table, dict) else None
+        if table is None or not isinstance(name, str):
             continue
         try:
-            driver = declared(kind, table.driver)
+            driver = declared(kind, name)
         except ImportError as error:
-            problems.add(f"{kind}.driver", table.driver, str(error))
+            problems.add(f"{kind}.driver", name, str(error))
             continue
         if driver is None:
             names = list(known_drivers(kind)) if known_drivers is not None else []
             listed = f"; there are: {', '.join(names)}" if names else ""
             allowed = f"there is no {kind} driver of that name{listed} (see: evenarm drivers)"
-            problems.add(f"{kind}.driver", table.driver, allowed, nearest(table.driver, names))
+            problems.add(f"{kind}.driver", name, allowed, nearest(name, names))
             continue
         drivers[kind] = driver
+        own = table.get("settings", {})
         settings[kind] = check_table(
-            table.settings,
+            own if isinstance(own, dict) else {},
             driver.settings,
             path=f"{kind}.settings.",
             signal_unit=unit,
@@ -216,7 +222,7 @@ def _world(
     file = path.parent / table.world
     simulation = SimulationSpec(file, table.seed if seed is None else seed)
     try:
-        tree, _ = read_toml(file, "the simulated world", _MEND)
+        tree, _ = read_toml(file, "the simulated world", _MEND_WORLD)
     except InputError as error:
         text = "; ".join(part for part in (error.what, error.why, error.mend) if part)
         problems.add("simulation.world", table.world, f"{text} ({error.where})")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any, TypeVar
@@ -53,6 +54,10 @@ class Problems:
     def unknown_key(self, path: str, value: object, key: str, known: Iterable[str]) -> None:
         known = list(known)
         near = nearest(key, known)
+        elsewhere = _tables_with(key)
+        if elsewhere:
+            self.add(path, value, f"no such key here; it belongs into {' or '.join(elsewhere)}")
+            return
         allowed = "no such key" if near or not known else f"no such key; known: {', '.join(known)}"
         self.add(path, value, allowed, near)
 
@@ -91,7 +96,7 @@ class Problems:
         elif kind == "evenarm":
             self.add(full, row["input"], row["msg"])
         elif kind == "literal_error":
-            choices = [part.strip(' "') for part in description.replace(" or ", ",").split(",")]
+            choices = re.findall(r'"([^"]+)"', description) or re.findall(r"\w+", description)
             near = nearest(str(row["input"]), choices)
             self.add(full, row["input"], f"must be {description}", near)
         else:
@@ -102,6 +107,8 @@ def _plain(row: dict[str, Any]) -> str:
     """pydantic's message without its terms for types."""
     if row["type"] == "finite_number":
         return "must be a finite number"
+    if row["type"] == "string_pattern_mismatch":
+        return "must be text without control characters"
     if row["type"] == "tuple_type":
         return "must be a pair in square brackets"
     return str(row["msg"]).replace("Input should be", "must be").replace("String", "text")
@@ -110,6 +117,14 @@ def _plain(row: dict[str, Any]) -> str:
 def _of_a_union(part: object) -> bool:
     """Parts of a location that name a branch of a union rather than a key."""
     return isinstance(part, str) and ("[" in part or part in {"float", "str", "int", "bool"})
+
+
+def _tables_with(key: str) -> list[str]:
+    """Tables of bench.toml that have such a key, where it is not one that many have."""
+    from bench.spec.schema import TABLES
+
+    names = [name for name, table in TABLES.items() if key in table.model_fields]
+    return [f"[{name}]" for name in names] if len(names) <= 2 else []
 
 
 def _table_of(annotation: object) -> type[Table] | None:

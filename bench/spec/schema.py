@@ -102,6 +102,14 @@ def _width(text: Any) -> float | Quantity:
             raise error from None
 
 
+def _possible_factor(value: float) -> float:
+    if value == 0:
+        raise refused("must not be zero: the stage would not change the path difference")
+    if not 1e-3 <= abs(value) <= 100:
+        raise refused("must be from 0.001 to 100, with either sign; 2 for a folded arm")
+    return value
+
+
 class Table(BaseModel):
     """What all tables share: no unknown keys, no silent conversions, no NaN."""
 
@@ -110,7 +118,7 @@ class Table(BaseModel):
 
 class Bench(Table):
     name: Name = Field(description="a name people will recognise in the records")
-    path_factor: float | None = Field(
+    path_factor: Annotated[float, AfterValidator(_possible_factor)] | None = Field(
         None,
         description="signed change of the path difference A minus B for one unit of stage reading, "
         "such as 2 for a folded arm A that gets longer with increasing reading",
@@ -120,7 +128,10 @@ class Bench(Table):
         None, description='"longer" or "shorter": what increasing reading makes of the moving arm'
     )
     folds: float = Field(
-        2.0, gt=0, description="path for one unit of stage reading, without sign; 2 when folded"
+        2.0,
+        ge=1e-3,
+        le=100,
+        description="path for one unit of stage reading, without sign; 2 when folded",
     )
     reference_wavelength: Wavelength | None = Field(
         None, description='vacuum wavelength where the zero is defined, such as "600 nm"'
@@ -200,10 +211,10 @@ class Source(Table):
     change_time: Duration = Field(0.0, description='cost of switching to it, such as "20 s"')
     warm_up: Duration = Field(0.0, description='such as "10 min"')
     laser_class: Literal["none", "1", "1M", "1C", "2", "2M", "3R", "3B", "4"] | None = Field(
-        None, description='from the label: "none", "1", "1M", "1C", "2", "2M", "3R", "3B" or "4"'
+        None, description='"none", "1", "1M", "1C", "2", "2M", "3R", "3B" or "4", as the label says'
     )
     risk_group: Literal["exempt", "1", "2", "3"] | None = Field(
-        None, description='of a lamp: "exempt", "1", "2" or "3"'
+        None, description='"exempt", "1", "2" or "3", for a lamp'
     )
     position: Name | None = Field(None, description="where the source changer has it, as text")
 

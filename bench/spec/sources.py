@@ -52,7 +52,8 @@ def build_source(
             spectrum = shape(described["centre_m"], described["fwhm_m"])
     except InputError as error:
         text = "; ".join(part for part in (error.what, error.why, error.mend) if part)
-        problems.add(f"{path}.file", str(file), f"{text} ({error.where})")
+        key = "file" if table.spectrum is None else "spectrum.file"
+        problems.add(f"{path}.{key}", str(file), f"{text} ({error.where})")
         return None
     except ValueError as error:
         problems.add(f"{path}.spectrum", _raw_spectrum(raw), str(error))
