@@ -11,7 +11,7 @@ from types import TracebackType
 from typing import Any
 
 import numpy as np
-from sqlalchemy import func, insert, select
+from sqlalchemy import bindparam, func, insert, select
 from sqlalchemy.engine import Connection
 
 from bench.errors import JournalError
@@ -39,6 +39,12 @@ from bench.journal.store import Store, prepare, refuse_unless_journal, use_log
 
 _CHUNK = 500
 _TAIL = 200
+
+# Built once: building a statement costs more than running it.
+_NEWEST = select(ENTRIES.c.seq, ENTRIES.c.sha256).order_by(ENTRIES.c.seq.desc()).limit(1)
+_BLOCK = select(BLOCKS.c.bytes).where(BLOCKS.c.name == bindparam("wanted"))
+_ADD_ENTRY = insert(ENTRIES)
+_ADD_BLOCK = insert(BLOCKS)
 
 
 def utc_now() -> datetime:
@@ -189,8 +195,10 @@ class Journal:
     def block(self, entry: Entry) -> dict[str, FloatArray]:
         """The readings that one entry of kind ``readings`` names. Raises JournalDamaged."""
         name = entry.body.get("block")
+        if not isinstance(name, str):
+            raise damaged(self.path, f"entry {entry.seq}: it names no block of readings")
         with self._store.reading() as connection:
-            row = connection.execute(select(BLOCKS.c.bytes).where(BLOCKS.c.name == name)).first()
+            row = connection.execute(_BLOCK, {"wanted": name}).first()
         if row is None or not isinstance(row[0], bytes) or block_name(row[0]) != name:
             raise damaged(self.path, f"entry {entry.seq}: its readings are missing or changed")
         try:
@@ -259,7 +267,7 @@ class Journal:
             with self._store.writing() as connection:
                 if _head(connection, self.path) != self._head:
                     raise damaged(self.path, "something else wrote to it during this run")
-                connection.execute(insert(ENTRIES).values(**row))
+                connection.execute(_ADD_ENTRY, row)
                 if block is not None:
                     self._keep_block(connection, row["seq"], block)
             self._head = Head(row["seq"], row["sha256"])
@@ -267,9 +275,9 @@ class Journal:
 
     def _keep_block(self, connection: Connection, seq: int, data: bytes) -> None:
         name = block_name(data)
-        there = connection.execute(select(BLOCKS.c.bytes).where(BLOCKS.c.name == name)).first()
+        there = connection.execute(_BLOCK, {"wanted": name}).first()
         if there is None:
-            connection.execute(insert(BLOCKS).values(entry=seq, name=name, bytes=data))
+            connection.execute(_ADD_BLOCK, {"entry": seq, "name": name, "bytes": data})
         elif there[0] != data:
             raise damaged(self.path, f"the block {name[:16]} is not what its name says")
 
@@ -310,9 +318,7 @@ def open_for_reading(path: Path, *, now: Callable[[], datetime]) -> Journal:
 
 
 def _head(connection: Connection, path: Path) -> Head:
-    row = connection.execute(
-        select(ENTRIES.c.seq, ENTRIES.c.sha256).order_by(ENTRIES.c.seq.desc()).limit(1)
-    ).first()
+    row = connection.execute(_NEWEST).first()
     if row is None:
         return Head(0, GENESIS)
     if not isinstance(row[1], str):
