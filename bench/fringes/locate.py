@@ -13,6 +13,7 @@ from bench.fringes.detect import (
     search_band,
     search_blind,
 )
+from bench.fringes.lines import remove_lines
 from bench.fringes.model import (
     BoolArray,
     Estimate,
@@ -62,6 +63,12 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
             notices.append(Notice("monochromatic", reason))
         weakest = _weakest_contrast(candidate, signal, scan.dark)
         return _refused(reason, false_alarm, notices, flat, weakest)
+    off = np.ones(u.size, dtype=bool)
+    off[window.first : window.stop] = False
+    hum = remove_lines(u, flat, off)
+    if bool(np.any(hum)):
+        signal, flat = signal - hum, flat - hum
+        window = settle(u, flat, candidate, band_known=band is not None) or window
     solution = solve(u, signal, window, known, per_m)
     return _result(scan, known, u, signal, window, solution, false_alarm, notices, middle, span)
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from bench.fringes.dispersion import Dispersion, of_glass, second_order
 from bench.fringes.honesty import covariance, noise_shares
+from bench.fringes.measures import FIRST
 from bench.fringes.model import FloatArray, Knowledge
 from bench.fringes.results import Solution
 from bench.fringes.ruler import slow_position_error
@@ -90,6 +91,7 @@ def _rounds(
         reference = per_m / known.at_wavelength_m
     weight = np.ones(part.size)
     guesses: list[tuple[float, float]] = []
+    sizes: FloatArray | None = None
     for turn in range(rounds):
         dispersion = _dispersion(known, reference, scale, per_m)
         if turn == 0:
@@ -97,7 +99,7 @@ def _rounds(
             if bend_prior <= NO_BEND:
                 guesses = guesses[:1]
         fits = [
-            fit_packet(part, values, weight, start, reference, dispersion, bend_prior, guess)
+            fit_packet(part, values, weight, start, reference, dispersion, bend_prior, guess, sizes)
             for guess in guesses
         ]
         fit = min(fits, key=lambda done: _cost(done, weight))
@@ -106,6 +108,7 @@ def _rounds(
         variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
         far = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
         solution = Solution(fit, covariance(fit, variance), shares)
+        sizes = _expected_sizes(solution)
         weight = np.where(far, 1e-6, 1.0) / variance
         weight = weight / float(np.mean(weight))
         guesses = [(fit.shift, fit.bend)]
@@ -114,6 +117,15 @@ def _rounds(
             guesses = [(fit.shift - _delay(fit, mean), fit.bend)]
             reference = mean
     return solution
+
+
+def _expected_sizes(solution: Solution) -> FloatArray:
+    """Standard deviations for a prior on the amplitudes: their smoothed power above noise."""
+    k = solution.fit.frequency.size
+    scatter2 = np.diag(solution.covariance)[FIRST : FIRST + k]
+    over = np.pad(np.maximum(solution.fit.amplitude**2 - scatter2, 0.0), 1, mode="edge")
+    smooth = 0.25 * over[:-2] + 0.5 * over[1:-1] + 0.25 * over[2:]
+    return np.sqrt(np.maximum(smooth, 0.04 * scatter2))
 
 
 def _delay(fit: PacketFit, frequency: float) -> float:

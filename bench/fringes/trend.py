@@ -59,7 +59,7 @@ def flat_tops(signal: FloatArray) -> BoolArray:
 def lone_spikes(signal: FloatArray, limit: float = 8.0) -> BoolArray:
     """Single readings far from all their neighbours, in the order of position.
 
-    A reading is a spike where it leaves the range of its four neighbours by more than ``limit``
+    A reading is a spike where it leaves the range of its eight neighbours by more than ``limit``
     times the usual distance from them, here and in the whole scan, and by more than twice that
     range. Fringes, sampled finely or coarsely, stay comparable with their neighbours.
     """
@@ -67,8 +67,9 @@ def lone_spikes(signal: FloatArray, limit: float = 8.0) -> BoolArray:
     marked = np.zeros(n, dtype=bool)
     if n < 16:
         return marked
-    padded = np.pad(signal, 2, mode="reflect")
-    near = np.stack([padded[0:n], padded[1 : n + 1], padded[3 : n + 3], padded[4 : n + 4]])
+    reach = 4
+    padded = np.pad(signal, reach, mode="reflect")
+    near = np.stack([padded[i : i + n] for i in range(2 * reach + 1) if i != reach])
     high, low = near.max(axis=0), near.min(axis=0)
     outside = np.maximum(signal - high, low - signal)
     apart = np.abs(signal - np.median(near, axis=0))

@@ -108,9 +108,12 @@ class PacketFit:
         return np.asarray(np.exp(2j * np.pi * np.outer(u, self.frequency)) @ c, dtype=np.complex128)
 
 
-def _least_squares(columns: FloatArray, values: FloatArray) -> FloatArray:
-    """Least squares by normal equations, leaving out directions that the readings do not hold."""
-    size, vectors = np.linalg.eigh(columns.T @ columns)
+def _least_squares(columns: FloatArray, values: FloatArray, hold: FloatArray) -> FloatArray:
+    """Least squares by normal equations, leaving out directions that the readings do not hold.
+
+    ``hold`` are the weights with which each unknown is held to zero.
+    """
+    size, vectors = np.linalg.eigh(columns.T @ columns + np.diag(hold**2))
     keep = size > 1e-11 * size[-1]
     part = vectors[:, keep]
     return np.asarray(part @ ((part.T @ (columns.T @ values)) / size[keep]), dtype=np.float64)
@@ -125,12 +128,14 @@ def fit_packet(
     dispersion: Dispersion,
     bend_prior: float,
     guess: tuple[float, float],
+    size_prior: FloatArray | None = None,
     rounds: int = 25,
 ) -> PacketFit:
     """Damped Gauss-Newton from a linear fit; ``guess`` is of shift and bend.
 
     ``bend_prior`` is the standard deviation, in units of ``bend``, of a weak prior that keeps a
-    dispersion without evidence near zero.
+    dispersion without evidence near zero; ``size_prior`` (k,) those of the amplitudes, which keep
+    frequencies without light from passing noise for information.
     """
     f, k = start.frequency, start.frequency.size
     u = x - start.origin
@@ -153,25 +158,35 @@ def fit_packet(
     units = np.array([1.0, 1.0 / max(float(np.max(np.abs(away))), 1e-300), 1.0])
     prior_root = 1.0 / max(bend_prior, 1e-12)
     noise = float(np.sqrt(np.sum(weight * start.residual**2) / max(1, start.freedom)))
-    prior_root *= max(noise, 1e-300)
+    noise = max(noise, 1e-300)
+    prior_root *= noise
+    hold = np.zeros(p + k)
+    if size_prior is not None:
+        hold[p:] = noise / np.maximum(size_prior, 1e-300)
 
     def linear_part(values: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         angle = carrier + theta_of(values)
         cosine, sine = np.cos(angle), np.sin(angle)
         columns = np.hstack([levels, cosine])
-        solution = _least_squares(columns * root[:, None], signal * root)
+        solution = _least_squares(columns * root[:, None], signal * root, hold)
         return cosine, sine, solution, signal - columns @ solution
 
     cosine, sine, solution, residual = linear_part(tail)
-    cost = float(np.sum(weight * residual**2) + (prior_root * tail[2]) ** 2)
+
+    def cost_of(left: FloatArray, parts: FloatArray, bend_now: float) -> float:
+        held = float(np.sum((hold * parts) ** 2)) + (prior_root * bend_now) ** 2
+        return float(np.sum(weight * left**2)) + held
+
+    cost = cost_of(residual, solution, float(tail[2]))
+    bottom = np.zeros((p + k + 1, p + k + 3))
+    bottom[np.arange(p + k), np.arange(p + k)] = hold
+    bottom[-1, -1] = prior_root
     damping, converged = 1e-4, False
     for _ in range(rounds):
         turning = -sine * solution[p:]
         phases = np.stack([turning.sum(axis=1), turning @ away, turning @ curve], axis=1) * units
         jacobian = np.hstack([levels, cosine, phases]) * root[:, None]
-        rhs = np.concatenate([residual * root, [-prior_root * tail[2]]])
-        bottom = np.zeros((1, p + k + 3))
-        bottom[0, -1] = prior_root
+        rhs = np.concatenate([residual * root, -hold * solution, [-prior_root * tail[2]]])
         full = np.vstack([jacobian, bottom])
         normal = full.T @ full
         gradient = full.T @ rhs
@@ -181,7 +196,7 @@ def fit_packet(
             step = np.linalg.solve(damped, gradient)[-3:] * units
             trial = tail + step
             attempt = linear_part(trial)
-            new_cost = float(np.sum(weight * attempt[3] ** 2) + (prior_root * trial[2]) ** 2)
+            new_cost = cost_of(attempt[3], attempt[2], float(trial[2]))
             if new_cost <= cost * (1.0 + 1e-12):
                 moved = True
                 break
@@ -200,13 +215,13 @@ def fit_packet(
     turning = -sine * solution[p:]
     phases = np.stack([turning.sum(axis=1), turning @ away, turning @ curve], axis=1) * units
     jacobian = np.hstack([levels, cosine, phases]) * root[:, None]
-    full = np.vstack([jacobian, np.zeros((1, p + k + 3))])
-    full[-1, -1] = prior_root
+    full = np.vstack([jacobian, bottom])
+    n = x.size
     size, vectors = np.linalg.eigh(full.T @ full)
     keep = size > 1e-12 * size[-1]
     half = vectors[:, keep] / np.sqrt(size[keep])
     left = full @ half
-    gain = (half @ left.T)[:, :-1] * root[None, :]
+    gain = (half @ left[:n].T) * root[None, :]
     gain[-3:] *= units[:, None]
     amplitude = solution[p:]
     if float(np.sum(amplitude)) < 0.0:
@@ -227,8 +242,8 @@ def fit_packet(
         fringes=cosine @ solution[p:],
         slope=slope,
         residual=residual,
-        leverage=np.einsum("ij,ij->i", left[:-1], left[:-1]),
+        leverage=np.einsum("ij,ij->i", left[:n], left[:n]),
         gain=gain,
-        freedom=x.size - int(keep.sum()),
+        freedom=n - int(keep.sum()),
         converged=converged,
     )
