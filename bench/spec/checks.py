@@ -55,10 +55,16 @@ def path_factor(table: schema.Bench | None, raw: object, problems: Problems) -> 
 
     OPD is arm A minus arm B, so it grows where A gets longer or B shorter.
     """
-    if table is None or not isinstance(raw, Mapping):
+    from bench.spec.schema import Bench
+
+    if not isinstance(raw, Mapping):
         return 1.0
     worded = [key for key in ("moving_arm", "increasing", "folds") if key in raw]
-    field = type(table).model_fields["path_factor"].description or ""
+    field = Bench.model_fields["path_factor"].description or ""
+    if not worded and "path_factor" not in raw:
+        problems.missing("bench.path_factor", f"{field}; or moving_arm and increasing")
+    if table is None:
+        return 1.0
     if table.path_factor is not None:
         if worded:
             problems.add(
@@ -66,11 +72,10 @@ def path_factor(table: schema.Bench | None, raw: object, problems: Problems) -> 
             )
         return table.path_factor
     if not worded:
-        problems.missing("bench.path_factor", f"{field}; or moving_arm and increasing")
         return 1.0
     for key in ("moving_arm", "increasing"):
         if key not in raw:
-            problems.missing(f"bench.{key}", str(type(table).model_fields[key].description))
+            problems.missing(f"bench.{key}", str(Bench.model_fields[key].description))
     longer = (table.moving_arm == "A") == (table.increasing == "longer")
     return table.folds if longer else -table.folds
 

@@ -87,7 +87,7 @@ def _array(
     raw: object, inner: Mapping[str, Setting], path: str, signal_unit: str, problems: Problems
 ) -> list[dict[str, Any]]:
     if not isinstance(raw, list) or not all(isinstance(item, dict) for item in raw):
-        problems.add(path, raw, f"must be tables [[{path.rpartition('.')[2]}]]")
+        problems.add(path, raw, f"must be tables [[{path.rpartition(' ')[2]}]]")
         return []
     return [
         _flat(item, inner, f"{path}[{index}].", signal_unit, problems, set())
@@ -104,6 +104,7 @@ def _flat(
     arrays: set[str],
 ) -> dict[str, Any]:
     given: dict[str, Any] = {}
+    broken: list[str] = []
     branches = {
         ".".join(name.split(".")[:depth])
         for name in known
@@ -119,6 +120,7 @@ def _flat(
                 if isinstance(value, dict):
                     walk(value, f"{name}.")
                 else:
+                    broken.append(f"{name}.")
                     problems.add(path + name, value, "must be a table")
             else:
                 here = [row.removeprefix(prefix) for row in known if row.startswith(prefix)]
@@ -136,7 +138,7 @@ def _flat(
             value = _value(given[name], setting, path + name, signal_unit, problems)
             if value is not None:
                 values[name] = value
-        elif setting.required:
+        elif setting.required and not name.startswith(tuple(broken)):
             problems.missing(path + name, setting.doc)
         elif setting.default is not None:
             values[name] = setting.default

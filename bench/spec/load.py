@@ -63,7 +63,7 @@ def load_bench(
     """
     path = Path(os.path.abspath(path))
     what = "the bench description"
-    if path.is_dir() and (path / "bench.toml").is_file():
+    if os.path.isdir(path) and os.path.isfile(path / "bench.toml"):
         raise InputError(
             f"{what} is a folder, not a file", where=str(path), mend=f"give {path / 'bench.toml'}"
         )

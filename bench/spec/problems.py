@@ -49,7 +49,8 @@ class Problems:
         self.found.append(Problem(path, written(value), allowed, near))
 
     def missing(self, path: str, allowed: str) -> None:
-        self.found.append(Problem(path, "(missing)", f"required: {allowed}"))
+        text = f"required: {allowed}" if allowed else "required"
+        self.found.append(Problem(path, "(missing)", text))
 
     def unknown_key(self, path: str, value: object, key: str, known: Iterable[str]) -> None:
         known = list(known)
@@ -111,7 +112,12 @@ def _plain(row: dict[str, Any]) -> str:
         return "must be text without control characters"
     if row["type"] == "tuple_type":
         return "must be a pair in square brackets"
-    return str(row["msg"]).replace("Input should be", "must be").replace("String", "text")
+    return (
+        str(row["msg"])
+        .replace("Input should be", "must be")
+        .replace("String", "text")
+        .replace("a valid string", "text")
+    )
 
 
 def _of_a_union(part: object) -> bool:
