@@ -100,7 +100,7 @@ def _import(row: Available) -> Driver:
     except (Exception, SystemExit) as error:  # an import may raise anything
         raise LoadFailure(row, f"{type(error).__name__}: {error}") from error
     if not isinstance(found, Driver):
-        raise LoadFailure(row, f"the object is a {type(found).__name__}, not a Driver")
+        raise LoadFailure(row, f"the object is of type {type(found).__name__}, not a Driver")
     if (found.kind, found.name) != (row.kind, row.name):
         raise LoadFailure(row, f"it declares itself as {found.kind} {found.name!r}")
     return found
