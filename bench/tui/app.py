@@ -79,19 +79,21 @@ class EvenarmApp(App[int]):
     CSS = """
     Screen { background: $background; color: $foreground; layers: base; overflow: hidden; }
     #head { height: 1; }
-    #next { height: 3; }
+    #next { height: 4; }
     #body { height: 1fr; }
     #left { width: 1fr; max-width: 38; padding: 0 1 0 1; }
     #right { width: 2fr; padding: 0 1 0 1; }
     #steps { height: 1fr; }
-    #bench { height: 7; }
+    #bench { height: 8; }
     #zero { height: 8; margin: 0 0 0 0; }
     #scan { height: 1fr; }
-    #foot { height: 1; }
+    #foot { height: 1; dock: bottom; }
     #question { height: 1fr; }
     #question-title, #question-hint { height: 1; }
     #question-scroll { height: 1fr; scrollbar-size: 0 0; background: $background; }
     #question-words { height: auto; }
+    #question-line { height: 1; }
+    #question-label { width: 10; }
     #question-name, #question-name:focus {
         height: 1; border: none; padding: 0 1;
         background: $line-background; color: $line-text; background-tint: transparent;
@@ -116,6 +118,7 @@ class EvenarmApp(App[int]):
         self._answered: set[str] = set()
         self._asked_since: tuple[str, float] = ("", 0.0)
         self._leave_when_done: int | None = None
+        self._leave_now: int | None = None
         self.failure: BaseException | None = None
         self.scene = Scene(control.view(), glyphs=glyphs)
         self._look()
@@ -140,8 +143,8 @@ class EvenarmApp(App[int]):
         return zero_text(self.scene, width, compact=compact)
 
     def on_mount(self) -> None:
-        self.set_interval(POLL_S, self._poll)
-        self._poll()
+        self.set_interval(POLL_S, self.poll)
+        self.poll()
 
     def _look(self) -> None:
         """Take a fresh snapshot of the run."""
@@ -166,8 +169,12 @@ class EvenarmApp(App[int]):
             asking_to_leave=leaving,
         )
 
-    def _poll(self) -> None:
+    def poll(self) -> None:
+        """Look at the run and show it, or leave if that is due."""
         self._beat()
+        if self._leave_now is not None:
+            self.exit(self._leave_now)
+            return
         self._look()
         if self.scene.finished and self._leave_when_done is not None:
             self.exit(self._leave_when_done)
@@ -175,8 +182,8 @@ class EvenarmApp(App[int]):
         self._show()
 
     def _show(self) -> None:
-        if not self.screen_stack or not self.is_mounted_screen():
-            return
+        if not self.screen_stack or not self.screen_stack[0].query("#foot"):
+            return  # not put together yet, or taken down already
         base = self.screen_stack[0]
         panel = base.query_one(QuestionPanel)
         asking = self.scene.question is not None
@@ -186,10 +193,6 @@ class EvenarmApp(App[int]):
             self.scene = replace(self.scene, more_below=panel.more_below)
         for part in base.query(Panel):
             part.repaint()
-
-    def is_mounted_screen(self) -> bool:
-        """Whether the parts of the screen are there to be painted."""
-        return bool(self.screen_stack[0].query("#foot"))
 
     def refresh_scene(self) -> None:
         """Show at once what a key has changed, without waiting for the next look."""
@@ -301,8 +304,8 @@ class EvenarmApp(App[int]):
         return statuses.get(self.scene.view.outcome or "", 3)
 
     def leave_from_outside(self, status: int) -> None:
-        """End the screen, asked for by another thread."""
-        self.call_later(self.exit, status)
+        """End the screen at the next look. May be called by any thread, at any time."""
+        self._leave_now = status
 
     def _handle_exception(self, error: Exception) -> None:
         # A part of the screen failed. Whatever moves is stopped before anything else is done.

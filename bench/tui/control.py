@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
-from bench.procedure.live import LiveView
+if TYPE_CHECKING:
+    from bench.procedure.live import LiveView
 
 __all__ = ["RunControl"]
 

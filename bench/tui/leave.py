@@ -51,16 +51,16 @@ class Watch(threading.Thread):
         *,
         last_resort: Callable[[RunControl, int], None] | None = None,
         now_s: Callable[[], float] = time.monotonic,
-        patience_s: float = PATIENCE_S,
-        grace_s: float = GRACE_S,
+        patience_s: float | None = None,
+        grace_s: float | None = None,
     ) -> None:
         super().__init__(name="evenarm-watch", daemon=True)
         self._control = control
         self._ask_to_leave = ask_to_leave
         self._last_resort = last_resort or end_by_force
         self._now_s = now_s
-        self._patience_s = patience_s
-        self._grace_s = grace_s
+        self._patience_s = PATIENCE_S if patience_s is None else patience_s
+        self._grace_s = GRACE_S if grace_s is None else grace_s
         self._last_beat_s: float | None = None
         self._silent = False
         # SimpleQueue.put may be called from a signal handler.

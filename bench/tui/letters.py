@@ -45,7 +45,7 @@ _DRAWN = {
     "T": "### .#. .#. .#. .#.",
     "U": "#.# #.# #.# #.# ###",
     "V": "#.# #.# #.# #.# .#.",
-    "W": "#...# #...# #.#.# ##.## #...#",
+    "W": "#...# #...# #.#.# #.#.# .#.#.",
     "X": "#.# #.# .#. #.# #.#",
     "Y": "#.# #.# .#. .#. .#.",
     "Z": "### ..# .#. #.. ###",
@@ -81,15 +81,18 @@ def large_width(words: str, glyphs: Glyphs) -> int:
     return sum(len(_PIXELS[ch][0]) + 1 for ch in _spelled(words)) - 1
 
 
-def large(words: str, width: int, glyphs: Glyphs) -> list[str]:
-    """``words`` in ``ROWS`` rows; plain in the middle row where large letters do not fit."""
+def large(words: str, width: int, glyphs: Glyphs, *, lower: bool = False) -> list[str]:
+    """``words`` in ``ROWS`` rows; plain in the middle row where large letters do not fit.
+
+    ``lower`` puts the half row that is left over above the letters instead of below them.
+    """
     if not glyphs.braille or not _drawable(words) or large_width(words, glyphs) > width:
         shown = glyphs.text(" ".join(words) if words.isalpha() else words)
         if len(shown) > width:
             shown = glyphs.text(words)
         return ["", shown[:width], ""]
     pixels = [".".join(_PIXELS[ch][row] for ch in _spelled(words)) for row in range(5)]
-    pixels.append("." * len(pixels[0]))
+    pixels.insert(0 if lower else 5, "." * len(pixels[0]))
     return [
         "".join(
             _BLOCKS[top == "#", bottom == "#"]

@@ -3,16 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from typing import TYPE_CHECKING
 
 from rich.text import Text
 from textual.app import ComposeResult
-from textual.containers import Vertical, VerticalScroll
+from textual.containers import Horizontal, Vertical, VerticalScroll
 from textual.events import Resize
 from textual.widgets import Input, Static
 
-from bench.procedure.live import Question
 from bench.tui.scene import Scene
 from bench.tui.views import question_hint, question_lines, title_row
+
+if TYPE_CHECKING:
+    from bench.procedure.live import Question
 
 __all__ = ["LONGEST_NAME", "Panel", "QuestionPanel"]
 
@@ -43,6 +46,12 @@ class Panel(Static):
                 self.styles.height = rows
         self.update(text, layout=False)
 
+    @property
+    def settled(self) -> bool:
+        """Whether the last rows painted have all been given their place."""
+        rows = 0 if self._shown is None else self._shown.plain.count("\n") + 1
+        return 0 < rows <= self.size.height
+
     def on_resize(self, _: Resize) -> None:
         self._shown = None
         self.repaint()
@@ -62,7 +71,11 @@ class QuestionPanel(Vertical):
         with VerticalScroll(id="question-scroll", can_focus=False):
             yield Panel(self._words, id="question-words", grows=True)
         yield Panel(self._hint, id="question-hint")
-        yield Input(id="question-name", max_length=LONGEST_NAME, select_on_focus=False)
+        with Horizontal(id="question-line"):
+            yield Static("your name ", id="question-label")
+            line = Input(id="question-name", max_length=LONGEST_NAME, select_on_focus=False)
+            line.cursor_blink = False  # nothing is redrawn while nothing happens
+            yield line
 
     def _title(self, width: int, _: int) -> Text:
         asked = self._scene().question
@@ -103,24 +116,24 @@ class QuestionPanel(Vertical):
                 self.screen.set_focus(None)
             return
         typed = question.kind == "acknowledge"
-        line.display = typed
+        self.query_one("#question-line").display = typed
         if fresh:
             self._read_to_end = False
             line.value = ""
-            self._scroller.scroll_home(animate=False)
+            self._scroller.scroll_home(animate=False, immediate=True)
         if typed and not line.has_focus:
             line.focus(scroll_visible=False)
         elif not typed and line.has_focus:
             self.screen.set_focus(None)
         for panel in self.query(Panel):
             panel.repaint()
-        laid_out = self._scroller.size.height > 0 and self._scroller.virtual_size.height > 0
-        if not fresh and laid_out and not self.more_below:
+        words = self.query_one("#question-words", Panel)
+        if not fresh and words.settled and self._scroller.size.height > 0 and not self.more_below:
             self._read_to_end = True
 
     def scroll_by(self, rows: int) -> None:
         """Scroll the words; ``rows`` counts down."""
-        self._scroller.scroll_relative(y=rows, animate=False)
+        self._scroller.scroll_relative(y=rows, animate=False, immediate=True)
 
     @property
     def page(self) -> int:

@@ -65,10 +65,13 @@ def ruler(
             continue
         name = round_length(length_m)
         place = ruler_place(length_m, widest_m, reach)
-        for centre in {middle - place, middle + place}:
-            start = max(0, min(row_width - len(name), centre - len(name) // 2))
-            around = labels[max(0, start - 2) : start + len(name) + 2]
-            if all(cell == " " for cell in around):
+        starts = [
+            max(0, min(row_width - len(name), centre - len(name) // 2))
+            for centre in {middle - place, middle + place}
+        ]
+        around = [labels[max(0, start - 2) : start + len(name) + 2] for start in starts]
+        if all(cell == " " for cells in around for cell in cells):
+            for start in starts:
                 labels[start : start + len(name)] = name
     if goal_m is not None and math.isfinite(goal_m) and goal_m > 0:
         place = ruler_place(goal_m, widest_m, reach)

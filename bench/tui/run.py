@@ -71,8 +71,8 @@ def run_app(control: RunControl) -> int:
         finally:
             if control.started and not control.finished:
                 control.stop("the screen is gone")
-            control.close(CLOSE_S)
             watch.end()
+            control.close(CLOSE_S)
     if isinstance(failure, EvenarmError):
         raise failure
     if wanted:

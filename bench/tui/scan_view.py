@@ -17,10 +17,10 @@ __all__ = ["scan_text"]
 
 
 def _ends(window: Window) -> tuple[str, str]:
-    """Both ends of the axis, in millimetres with as many digits as tell them apart."""
+    """Both ends of the axis, in millimetres of stage reading, with digits to tell them apart."""
     span_mm = (window.right - window.left) * 1e3
     digits = max(1, min(7, 2 - math.floor(math.log10(span_mm)))) if span_mm > 0 else 3
-    return f"{window.left * 1e3:.{digits}f}", f"{window.right * 1e3:.{digits}f} mm"
+    return f"{window.left * 1e3:.{digits}f}", f"{window.right * 1e3:.{digits}f} mm stage"
 
 
 def _zero_place(scene: Scene, window: Window, width: int) -> tuple[int | None, str]:

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
-from bench.procedure.live import LiveView, Question
 from bench.tui.glyphs import FULL, Glyphs
 from bench.tui.palette import DARK, Palette
+
+if TYPE_CHECKING:
+    from bench.procedure.live import LiveView, Question
 
 __all__ = ["OUTCOME_WORDS", "Phase", "Scene"]
 

@@ -20,6 +20,7 @@ BoolArray = NDArray[np.bool_]
 # Bit of each dot in a braille pattern, by (row, column); The Unicode Standard, block U+2800.
 _BRAILLE_BITS = np.array([[0x01, 0x08], [0x02, 0x10], [0x04, 0x20], [0x40, 0x80]])
 _ASCII_MARKS = np.array([" ", "'", ".", ":"])
+_FLAT = 1e-12  # relative; below it, rounding is all that tells two values apart
 _LONGEST_LINK = 12  # columns of dots that a straight line between two readings may bridge
 
 
@@ -48,10 +49,16 @@ def window_of(x: FloatArray, signal: FloatArray) -> Window | None:
         return None
     left, right = float(x[usable].min()), float(x[usable].max())
     low, high = float(signal[usable].min()), float(signal[usable].max())
-    if left == right:
-        left, right = left - 1e-9, right + 1e-9
-    room = 0.04 * (high - low) or max(1e-9, 0.01 * abs(high))
+    across = 0.0 if right - left > _FLAT * max(abs(left), abs(right)) else 0.5
+    left, right = left - across * _apart(left), right + across * _apart(right)
+    flat = high - low <= _FLAT * max(abs(low), abs(high))
+    room = _apart(high) if flat else 0.04 * (high - low)
     return Window(left, right, low - room, high + room)
+
+
+def _apart(value: float) -> float:
+    """A step that is seen beside ``value``, for windows that would otherwise have no width."""
+    return max(1e-9, 0.01 * abs(value))
 
 
 def _extents(
@@ -63,6 +70,7 @@ def _extents(
     order = np.argsort(x, kind="stable")
     x, signal = x[order], signal[order]
     broken = ~(np.isfinite(x) & np.isfinite(signal))
+    x, signal = np.where(broken, window.left, x), np.where(broken, window.low, signal)
     place = (x - window.left) / (window.right - window.left) * (columns - 1)
     height = (signal - window.low) / (window.high - window.low) * (heights - 1)
     seen = ~broken & (place >= -0.5) & (place <= columns - 0.5)

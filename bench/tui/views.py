@@ -73,14 +73,13 @@ def head_text(scene: Scene, width: int) -> Text:
     times = f"{clock(view.elapsed_s)} gone"
     if view.remaining_s is not None and not scene.finished:
         times += f", ~{clock(view.remaining_s)} left"
+    names = glyphs.text(f"{printable(view.bench_name, 80)} · {printable(view.procedure, 80)}")
     right = f"journal {printable(view.head[:8])}   {times} " if view.head else f"{times} "
     banner = " SIMULATED " if view.simulated else ""
-    room = width - cell_len(right) - len(banner) - 2
-    if room < 24 and view.head:  # the journal's head gives way first
+    room = width - cell_len(right) - len(banner) - 3
+    if cell_len(names) > room:  # the journal's head gives way first
         right = f"{times} "
-        room = width - cell_len(right) - len(banner) - 2
-    names = f"{printable(view.bench_name, 80)} {glyphs.text('·')} {printable(view.procedure, 80)}"
-    names = glyphs.text(names)
+        room = width - cell_len(right) - len(banner) - 3
     row = Text(" ", style=palette.text)
     row.append(fitted(names, min(cell_len(names), max(room, 0)), glyphs), style="bold")
     row.append(" ")
@@ -101,14 +100,14 @@ def _what_next(scene: Scene) -> tuple[str, str, str]:
     if scene.phase == "not begun":
         return "STOPPED", "Nothing was begun. Q leaves.", ""
     if scene.phase == "stopping":
-        return "STOPPING", "Software stop asked. Wait until the stage is at rest.", view.doing
+        return "STOPPING", "Software stop asked. Wait until the stage is at rest.", ""
     if scene.phase == "ready":
-        return "START", view.next_action or "Press Enter to begin the run.", scene.note
+        return "START", "Press Enter to begin the run.", scene.note
     if asked is not None and scene.phase == "ask":
         if asked.kind == "acknowledge":
             return "READ", "Read it all, type your name, press Enter.", scene.note
         return "ANSWER", "Y: yes.  N: no.", scene.note
-    return "WAIT", view.next_action or "Nothing to do: the bench is at work.", view.doing
+    return "WAIT", view.next_action or "Nothing to do: the bench is at work.", ""
 
 
 def _left_at(scene: Scene) -> str:
@@ -128,23 +127,21 @@ def _residual(scene: Scene) -> str:
     return f"residual OPD {shown}"
 
 
-def _bar(
-    word: str, beside: Sequence[str], width: int, style: str, glyphs: Glyphs
-) -> tuple[list[Text], int]:
-    """Three rows: a large word with up to three lines beside it; and where those lines begin."""
-    drawn = letters.large(word, max(1, width - 2), glyphs)
+def _bar(word: str, beside: Sequence[str], width: int, style: str, glyphs: Glyphs) -> list[Text]:
+    """Four rows: a large word, clear of the edges, and up to four lines beside it."""
+    drawn = [*letters.large(word, max(1, width - 2), glyphs, lower=True), ""]
     start = max(cell_len(row) for row in drawn) + 4
     rows = []
-    for left, words in zip(drawn, [*beside, "", "", ""], strict=False):
+    for left, words in zip(drawn, [*beside, "", "", "", ""], strict=False):
         row = Text(f" {set_cell_size(left, start - 1)}", style=f"bold {style}")
         row.append(fitted(words, max(0, width - start), glyphs))
         row.truncate(width, pad=True)
         rows.append(row)
-    return rows, start
+    return rows
 
 
 def next_text(scene: Scene, width: int) -> Text:
-    """What to do next: three rows, and up to three more with the reason once a run is over."""
+    """What to do next: four rows, and up to three more with the reason once a run is over."""
     palette, glyphs, view = scene.palette, scene.glyphs, scene.view
     calm = f"{palette.calm_text} on {palette.calm_bar}"
     if scene.phase == "done":
@@ -152,8 +149,8 @@ def next_text(scene: Scene, width: int) -> Text:
         colour = {"accepted": palette.good, "stopped": palette.warn}.get(outcome, palette.bad)
         style = f"{palette.background} on {colour}"
         word = OUTCOME_WORDS.get(outcome, glyphs.text(printable(outcome, 20)).upper())
-        after = "Q leaves."
-        rows, _ = _bar(word, [_residual(scene), _left_at(scene), after], width, style, glyphs)
+        facts = ["", _residual(scene), _left_at(scene), "Q leaves."]
+        rows = _bar(word, facts, width, style, glyphs)
         advice = " ".join(filter(None, (view.next_action or _AFTERWARDS.get(outcome, ""),)))
         words = [f"Reason: {printable(view.reason)}"] if view.reason else []
         for line in [*words, f"Next: {advice}"] if advice else words:
@@ -169,11 +166,11 @@ def next_text(scene: Scene, width: int) -> Text:
     if scene.phase in ("stopping", "not begun"):
         style = f"{palette.background} on {palette.warn}"
     start = letters.large_width(word, glyphs) + 4
-    wrapped = textwrap.wrap(glyphs.text(printable(instruction)), max(10, width - start))[:3]
-    if len(wrapped) == 1:
-        wrapped = ["", *wrapped] if not remark else wrapped
-    rows, _ = _bar(word, [*wrapped, *([remark] if remark else [])][:3], width, style, glyphs)
-    return Text("\n").join(rows)
+    lines = textwrap.wrap(glyphs.text(printable(instruction)), max(10, width - start))[:3]
+    lines += [remark] if remark else []
+    if len(lines) < 4:
+        lines.insert(0, "")
+    return Text("\n").join(_bar(word, lines, width, style, glyphs))
 
 
 def steps_text(scene: Scene, width: int, height: int) -> Text:
@@ -214,7 +211,8 @@ def bench_text(scene: Scene, width: int) -> Text:
     view, glyphs, palette = scene.view, scene.glyphs, scene.palette
     rows = [title_row("BENCH", width, scene)]
     doing = view.doing or ("idle" if not view.stage_moving else "moving")
-    rows.append(Text(fitted(doing, width, glyphs), style=palette.text))
+    wrapped = [*textwrap.wrap(glyphs.text(printable(doing)), max(8, width))[:2], ""][:2]
+    rows += [Text(fitted(row, width, glyphs).rstrip(), style=palette.text) for row in wrapped]
     if view.progress is not None and not scene.finished:
         share = f" {100 * max(0.0, min(1.0, view.progress)):3.0f} %"
         bar = _filled(view.progress, width - len(share), glyphs)
@@ -228,7 +226,7 @@ def bench_text(scene: Scene, width: int) -> Text:
         rows.append(row)
 
     if not view.stage_known or view.stage_position_m is None:
-        line("stage", "position UNKNOWN", f"bold {palette.bad}")
+        line("stage", "UNKNOWN", f"bold {palette.bad}")
         line("", "MOVING" if view.stage_moving else "", f"bold {palette.warn}")
     else:
         line("stage", position(view.stage_position_m), f"bold {palette.text}")
@@ -259,6 +257,8 @@ def _sureness(scene: Scene, width: int) -> Text:
         row.append(glyphs.text(f"± {round_length(amount)}"), style=f"bold {palette.text}")
         row.append(f" {axis}    ")
     row.append("95 %")
+    if view.accept_residual_opd_m is not None:
+        row.append(f"    {glyphs.goal} goal")
     row.truncate(width)
     return row
 
@@ -276,7 +276,7 @@ def zero_text(scene: Scene, width: int, *, compact: bool = False) -> Text:
         aside = "stage reading, only expected so far"
         number, unit = f"{view.zero_m * 1e3:.3f}".rstrip("0").rstrip("."), "mm"
         half = view.half_width_m
-        if half is not None and math.isfinite(half):
+        if half is not None and math.isfinite(half) and not compact:
             digits = max(0, min(6, 1 - math.floor(math.log10(max(half * 1e3, 1e-9)))))
             number = f"{view.zero_m * 1e3:.{digits}f} ± {half * 1e3:.{digits}f}"
     else:
