@@ -23,6 +23,7 @@ FWHM_PER_SD = 2.0 * math.sqrt(2.0 * math.log(2.0))
 READINGS_PER_PACKET = 10.0  # within the packet's full width at half maximum, when searching
 READINGS_PER_FRINGE = 3.0  # where the fringes are not undersampled on purpose
 SPEED_TOLERANCE = 0.03  # how well a stage keeps its speed
+FOLD_ROOM = 0.05  # fringes a reading between an aliased band and where it would fold
 WANTED_DETECTION = 0.999
 BEST_DETECTION = 0.999  # nothing is believed to be seen more surely: lamps do fail
 WORST_DETECTION = 0.5  # a source that is seen less often is no use
@@ -113,14 +114,15 @@ def locating_sd_m(
 def _sees_band(facts: BenchFacts, source: SourceFacts, spacing_m: FloatArray) -> BoolArray:
     """True where the aliased band of the source keeps clear of the folds of the sampling.
 
-    The half-power band is doubled about its middle and the spacing allowed its tolerance; the band
-    folds onto itself where it holds a multiple of half the sampling rate, in fringes a reading.
+    The half-power band is doubled about its middle and the spacing allowed its tolerance. In
+    fringes a reading, the band then has to lie between two neighbouring multiples of one half, and
+    not near one: there it folds onto itself, or ends among drift and hum.
     """
     low, high = source.band
     middle, half = (low + high) / 2.0, (high - low) / 2.0
     opd = abs(facts.opd_per_m) * spacing_m
-    least = np.maximum(middle - 2.0 * half, 0.0) * opd * (1.0 - SPEED_TOLERANCE)
-    most = (middle + 2.0 * half) * opd * (1.0 + SPEED_TOLERANCE)
+    least = np.maximum(middle - 2.0 * half, 0.0) * opd * (1.0 - SPEED_TOLERANCE) - FOLD_ROOM
+    most = (middle + 2.0 * half) * opd * (1.0 + SPEED_TOLERANCE) + FOLD_ROOM
     result: BoolArray = np.floor(2.0 * least) == np.floor(2.0 * most)
     return result
 
