@@ -35,7 +35,7 @@ class Candidate:
 
     ``excess`` is its energy over the usual energy of the scan; ``false_alarm`` the probability that
     noise alone shows as much somewhere in the scan; ``usual_amplitude`` the fringe amplitude that
-    the usual energy corresponds to.
+    the usual energy corresponds to. ``steady``: fringes as strong run through the whole scan.
     """
 
     x: float
@@ -47,6 +47,7 @@ class Candidate:
     excess: float
     places: float
     false_alarm: float
+    steady: bool = False
 
 
 def chance(excess: float, places: float, floor: float) -> float:
@@ -102,7 +103,8 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
     even = np.linspace(x[0], x[-1], count)
     values = np.interp(even, x, signal)
     step = span / (count - 1)
-    best: tuple[float, float, float, float, float, float] | None = None
+    best: tuple[float, float, float, float, float, float, float] | None = None
+    steady = 0.0  # energy a reading of the strongest frequency present nearly everywhere
     length = 16
     while length <= count // 3:
         hop = max(1, length // 4)
@@ -119,6 +121,8 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
         # fewer than two cycles in a tile is level, not fringes; the last bins are beyond trust
         use = slice(2, max(3, int(0.8 * power.shape[1])))
         score = power[:, use] * (cycles[use] / length) ** 2
+        throughout = np.percentile(score, 25, axis=0)
+        steady = max(steady, float(np.max(throughout)) / length)
         excess = power[:, use] / usual[use]
         places = power.shape[0] / 2.0
         allowed = excess > 3.0 * np.log(4.0 * power.size)
@@ -126,6 +130,7 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
             flat = int(np.argmax(np.where(allowed, score, 0.0)))
             at, bin_ = np.unravel_index(flat, score.shape)
             value = float(score[at, bin_])
+            strong = value / length
             if best is None or value > best[0]:
                 best = (
                     value,
@@ -134,11 +139,12 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
                     length * step,
                     float(excess[at, bin_]),
                     places * power.shape[1],
+                    strong,
                 )
         length *= 2
     if best is None:
         return None
-    _, place, frequency, width, excess_, places_ = best
+    _, place, frequency, width, excess_, places_, strong_ = best
     half = 0.75 / width
     return Candidate(
         x=place,
@@ -150,4 +156,5 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
         excess=excess_,
         places=places_,
         false_alarm=chance(excess_, places_, FLOOR_BLIND),
+        steady=steady > 0.5 * strong_,
     )

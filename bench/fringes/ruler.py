@@ -23,7 +23,7 @@ QUADRATURE = 3.0
 def slow_position_error(u: FloatArray, fit: PacketFit, *, again: bool = False) -> FloatArray | None:
     """Position errors (n,) in the unit of u, or None where the residuals do not show any.
 
-    ``u`` rising, the positions of the fit. Residuals show some where most of the residual energy lies
+    ``u`` rising, the positions of the fit. Residuals show some where most of their energy lies
     within half a carrier of the carrier yet outside the band, and turns the fringes (quadrature)
     rather than scaling them. ``again`` leaves this test out: what one round has left over.
     """

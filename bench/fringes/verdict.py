@@ -16,6 +16,7 @@ EVERYWHERE = "fringes everywhere, no packet"
 NOTHING = "nothing rises above the noise like a packet"
 STEP = "the signal jumps there: a step, not a packet"
 FEW_PLACES = 10.0
+STRENGTH = 1e-4
 
 
 def f_tail(ratio: float, above: float, below: float) -> float:
@@ -81,6 +82,8 @@ def judge(
     u: FloatArray, flat: FloatArray, candidate: Candidate, window: Window | None
 ) -> tuple[str, float]:
     """Why this is no packet (empty where it is one), and the false-alarm probability."""
+    if candidate.steady:
+        return EVERYWHERE, 1.0
     if window is None:
         if candidate.false_alarm > ACCEPT:
             return NOTHING, candidate.false_alarm
@@ -88,11 +91,11 @@ def judge(
     part, values = u[window.first : window.stop], flat[window.first : window.stop]
     fit = window.fit
     _, chance = strength(values, fit)
-    by_strength = min(1.0, chance * candidate.places)
     few = candidate.places < FEW_PLACES
-    false_alarm = by_strength if few else max(candidate.false_alarm, by_strength)
-    false_alarm = max(false_alarm, FLOOR_KNOWN)
-    if by_strength > ACCEPT:
+    if few:
+        chance = min(1.0, chance * candidate.places)
+    false_alarm = max(chance, FLOOR_KNOWN if few else candidate.false_alarm)
+    if chance > (ACCEPT if few else STRENGTH):
         return NOTHING, false_alarm
     if candidate.false_alarm > ACCEPT and not few:
         return EVERYWHERE, candidate.false_alarm

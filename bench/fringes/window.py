@@ -13,6 +13,7 @@ from bench.fringes.zero import LinearFit, envelope_of, fit_linear
 
 REACH = 2.6  # half a window over the envelope's full width at half maximum
 MOST_UNKNOWNS = 160
+MARGINS = (1.25, 0.9, 0.65)  # of the half-power band to either side: where a Gaussian is at 1.3 %
 
 
 @dataclass(frozen=True)
@@ -50,16 +51,26 @@ def full_width(u: FloatArray, envelope: FloatArray) -> tuple[float, float]:
 def settle(
     x: FloatArray, signal: FloatArray, candidate: Candidate, *, band_known: bool
 ) -> Window | None:
+    """As ``_settle``, with less of the band's wings where the scan's end leaves few readings."""
+    for margin in MARGINS if band_known else MARGINS[:1]:
+        window = _settle(x, signal, candidate, margin, band_known=band_known)
+        if window is not None:
+            return window
+    return None
+
+
+def _settle(
+    x: FloatArray, signal: FloatArray, candidate: Candidate, margin: float, *, band_known: bool
+) -> Window | None:
     """Centre and size the window on the packet; None where too few readings are left for it.
 
-    ``x`` rising. With ``band_known`` the analysed band is the half-power band widened to where a
-    Gaussian spectrum has fallen to 1.3 %; else it is measured.
+    ``x`` rising. With ``band_known`` the analysed band is the half-power band, its full width
+    times ``margin`` to either side of its middle; else it is measured.
     """
     span = float(x[-1] - x[0])
     if band_known:
         middle, size = 0.5 * (candidate.low + candidate.high), candidate.high - candidate.low
-        low, high = middle - 1.25 * size, middle + 1.25 * size
-        low = max(low, 0.1 * middle)
+        low, high = max(middle - margin * size, 0.1 * middle), middle + margin * size
         width = ENVELOPE_FWHM / size
     else:
         width = candidate.width
@@ -72,7 +83,7 @@ def settle(
         first = int(np.searchsorted(x, centre - reach))
         stop = int(np.searchsorted(x, centre + reach, side="right"))
         frequency = band_grid(low, high, 2.0 * reach)
-        if frequency.size > MOST_UNKNOWNS or stop - first < 2 * frequency.size + 12:
+        if frequency.size > MOST_UNKNOWNS or stop - first < 2 * frequency.size + 6:
             # too few readings for the spectrum asked for: a smaller window has fewer unknowns
             if stop - first < 24 or width <= ENVELOPE_FWHM / max(high - low, 1e-300):
                 return result
