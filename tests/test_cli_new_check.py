@@ -102,6 +102,18 @@ def test_new_in_place_of_a_file(tmp_path: Path) -> None:
     assert (tmp_path / "b").read_text() == "mine"
 
 
+def test_new_loses_no_race_for_a_file(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    real_lexists = os.path.lexists
+
+    def nothing_yet(path: str | Path) -> bool:
+        return real_lexists(path) and Path(path).name != "bench.toml"
+
+    (tmp_path / "bench.toml").write_text("somebody else's")
+    monkeypatch.setattr(os.path, "lexists", nothing_yet)
+    assert evenarm("new", str(tmp_path)).exit_code == 2
+    assert (tmp_path / "bench.toml").read_text() == "somebody else's"
+
+
 def test_new_takes_back_what_it_began(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     real_mkdir = Path.mkdir
 
