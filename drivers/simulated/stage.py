@@ -72,16 +72,16 @@ class SimulatedStage:
                 self._world.motor_s(),
             )
         while self._world.motor_s() < self._world.path.rest_s:
+            wait_s = self._world.path.rest_s - self._world.motor_s() + 1e-6
             left_s = timeout_s - (self._world.time_s() - began_s) - 2.0 * self._reply_s
-            if left_s <= 0.0:
+            self._world.clock.sleep_s(min(wait_s, left_s))
+            if left_s < wait_s:
                 self._halt()
                 raise MotionFailed(
                     f"the origin was not reached within {timeout_s:g} s",
                     device="stage",
                     mend="allow more time, or see what holds the axis",
                 )
-            rest_s = self._world.path.rest_s - self._world.motor_s()
-            self._world.clock.sleep_s(min(left_s, rest_s + 1e-6))
         self._known, self._counter_from_m = True, 0.0
         return self.state(timeout_s=max(self._reply_s, timeout_s))
 
