@@ -227,6 +227,10 @@ class RunSession:
         return self._setup
 
     @property
+    def spec(self) -> BenchSpec:
+        return self._spec
+
+    @property
     def started(self) -> bool:
         return self._begun
 
