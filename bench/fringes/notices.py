@@ -27,16 +27,19 @@ def at_the_edge(
     width is all that is known.
     """
     place = fit.origin + zero.value
-    near = min(place - float(u[0]), float(u[-1]) - place)
-    near = min(near, window.peak - float(u[0]), float(u[-1]) - window.peak) / window.width
+    width = window.width
+    near = min(window.peak - float(u[0]), float(u[-1]) - window.peak) / width
     if near > NEAR_END:
         return zero, []
     text = "the packet is cut by the end of the scan; scan on past it"
     if near < LOST:
-        value = min(max(place, float(u[0])), float(u[-1])) - fit.origin
-        wide = max(window.width, zero.standard_uncertainty)
-        return Estimate(value, wide), [Notice("edge", text)]
-    more = 0.1 * window.width * (NEAR_END - near)
+        wide = max(width, zero.standard_uncertainty)
+        return Estimate(window.peak - fit.origin, wide), [Notice("edge", text)]
+    apart = abs(place - window.peak)
+    if apart > 0.25 * width:
+        # the fit ran off along what half a packet leaves open; the envelope's maximum did not
+        return Estimate(window.peak - fit.origin, 0.25 * width), [Notice("edge", text)]
+    more = math.hypot(0.05 * width * (NEAR_END - near), 0.5 * apart)
     return Estimate(zero.value, math.hypot(zero.standard_uncertainty, more)), [Notice("edge", text)]
 
 

@@ -16,6 +16,7 @@ from bench.fringes.ruler import slow_position_error
 from bench.fringes.window import Window
 from bench.fringes.zero import LinearFit, PacketFit, fit_linear, fit_packet
 
+CUT_BEND_PRIOR = 1.0  # half a packet cannot tell dispersion from a shift
 BEND_PRIOR = 6.0  # standard deviation of a prior on dispersion: 3 rad at the rms half-width
 NO_BEND = 1e-6
 ROUNDS = 3
@@ -28,7 +29,9 @@ def solve(
 ) -> Solution:
     """The packet in ``window`` of the sorted readings (u, signal); ``per_m`` is OPD a unit of u."""
     part, values = u[window.first : window.stop], signal[window.first : window.stop]
-    solution = _rounds(part, values, window.fit, window.peak, known, per_m, BEND_PRIOR)
+    cut = window.first == 0 or window.stop == u.size
+    prior = CUT_BEND_PRIOR if cut else BEND_PRIOR
+    solution = _rounds(part, values, window.fit, window, known, per_m, prior)
     error = slow_position_error(part, solution.fit)
     if error is None:
         return solution
@@ -38,8 +41,8 @@ def solve(
         last = turn == RULER_ROUNDS - 1
         ruled = part + error
         start = fit_linear(ruled, values, fit.origin, fit.frequency, even)
-        peak = fit.origin + solution.fit.shift
-        solution = _rounds(ruled, values, start, peak, known, per_m, NO_BEND, ROUNDS if last else 1)
+        now = replace(window, peak=fit.origin + solution.fit.shift)
+        solution = _rounds(ruled, values, start, now, known, per_m, NO_BEND, ROUNDS if last else 1)
         if last:
             break
         more = slow_position_error(ruled, solution.fit, again=True)
@@ -76,7 +79,7 @@ def _rounds(
     part: FloatArray,
     values: FloatArray,
     start: LinearFit,
-    peak: float,
+    window: Window,
     known: Knowledge,
     per_m: float | None,
     bend_prior: float,
@@ -90,26 +93,29 @@ def _rounds(
     if known.at_wavelength_m is not None and per_m is not None:
         reference = per_m / known.at_wavelength_m
     weight = np.ones(part.size)
+    far = window.width
     guesses: list[tuple[float, float]] = []
     sizes: FloatArray | None = None
     for turn in range(rounds):
         dispersion = _dispersion(known, reference, scale, per_m)
         if turn == 0:
-            guesses = _first_guesses(start, peak, dispersion, reference)
+            guesses = _first_guesses(start, window.peak, dispersion, reference)
             if bend_prior <= NO_BEND:
                 guesses = guesses[:1]
         fits = [
-            fit_packet(part, values, weight, start, reference, dispersion, bend_prior, guess, sizes)
+            fit_packet(
+                part, values, weight, start, reference, dispersion, bend_prior, guess, far, sizes
+            )
             for guess in guesses
         ]
         fit = min(fits, key=lambda done: _cost(done, weight))
         shares = noise_shares(fit.residual, fit.leverage, fit.slope, fit.fringes)
         variance = shares.variance(fit.slope, fit.fringes)
         variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
-        far = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
+        wild = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
         solution = Solution(fit, covariance(fit, variance), shares)
         sizes = _expected_sizes(solution)
-        weight = np.where(far, 1e-6, 1.0) / variance
+        weight = np.where(wild, 1e-6, 1.0) / variance
         weight = weight / float(np.mean(weight))
         guesses = [(fit.shift, fit.bend)]
         mean, _ = solution.mean_frequency()

@@ -76,6 +76,8 @@ def _settle(
         width = candidate.width
         middle = 0.5 * (candidate.low + candidate.high)
         low, high = _around(middle, 5.0 / width)
+    # dispersion only widens: nothing is narrower than the band allows
+    narrowest = 0.95 * width if band_known else 0.0
     centre = candidate.x
     result: Window | None = None
     for turn in range(5):
@@ -91,8 +93,14 @@ def _settle(
             continue
         part = x[first:stop]
         fit = fit_linear(part, signal[first:stop], centre, frequency, np.ones(stop - first))
-        fine = np.linspace(part[0] - centre, part[-1] - centre, 8 * frequency.size + 1)
+        left, right = float(part[0]) - centre, float(part[-1]) - centre
+        if first == 0 or stop == x.size:
+            # what a cut packet leaves undetermined can ring anywhere: stay with the correlation
+            left = max(left, candidate.x - centre - 1.2 * width)
+            right = min(right, candidate.x - centre + 1.2 * width)
+        fine = np.linspace(left, right, 8 * frequency.size + 1)
         peak, seen = full_width(fine, np.abs(envelope_of(fit, fine)))
+        seen = max(seen, narrowest)
         result = Window(first, stop, centre + peak, seen, low, high, fit)
         moved = abs(peak) > 0.25 * seen
         resized = not 0.7 < seen / width < 1.4

@@ -128,10 +128,12 @@ def fit_packet(
     dispersion: Dispersion,
     bend_prior: float,
     guess: tuple[float, float],
+    farthest: float,
     size_prior: FloatArray | None = None,
     rounds: int = 25,
 ) -> PacketFit:
-    """Damped Gauss-Newton from a linear fit; ``guess`` is of shift and bend.
+    """Damped Gauss-Newton from a linear fit; ``guess`` is of shift and bend;
+    the shift stays within ``farthest`` of it.
 
     ``bend_prior`` is the standard deviation, in units of ``bend``, of a weak prior that keeps a
     dispersion without evidence near zero; ``size_prior`` (k,) those of the amplitudes, which keep
@@ -195,6 +197,9 @@ def fit_packet(
             damped = normal + np.diag(np.diag(normal) * damping + 1e-12 * np.trace(normal) / p)
             step = np.linalg.solve(damped, gradient)[-3:] * units
             trial = tail + step
+            if abs(trial[1] - shift) > farthest:
+                damping = max(damping, 1e-6) * 10.0
+                continue
             attempt = linear_part(trial)
             new_cost = cost_of(attempt[3], attempt[2], float(trial[2]))
             if new_cost <= cost * (1.0 + 1e-12):
