@@ -10,7 +10,6 @@ from drivers.contracts import (
     DeviceRefused,
     Identity,
     LimitReached,
-    MotionFailed,
     NotConnected,
     NotHomed,
     StageState,
@@ -38,6 +37,7 @@ class SimulatedStage:
         self._known = bool(world.value("stage.homed"))
         # Before homing the counter starts at nothing wherever the carriage stands.
         self._counter_from_m = 0.0 if self._known else world.path.command_m(0.0)
+        self._homing = False
         self._open = True
 
     def identity(self, *, timeout_s: float) -> Identity:
@@ -54,36 +54,23 @@ class SimulatedStage:
         with self._world.locked():
             now_s = self._world.time_s()
             motor_s = self._world.motor_s()
+            self._end_homing()
             position_m = self._world.path.command_m(motor_s) - self._counter_from_m
             moving = motor_s < self._world.path.rest_s
         clock_s = float(self._world.clock_s(np.asarray(now_s)))
         return StageState(self._rounded(position_m), clock_s, moving, self._known)
 
-    def home(self, *, timeout_s: float) -> StageState:
+    def start_home(self, *, timeout_s: float) -> None:
         self._ask(timeout_s)
-        began_s = self._world.time_s()
         with self._world.locked():
             self._refuse_motion()
-            self._known = False
+            self._known, self._homing = False, True
             self._world.path.go(
                 self._world.origin_m,
                 self._speed_m_s,
                 self._acceleration_m_s2,
                 self._world.motor_s(),
             )
-        while self._world.motor_s() < self._world.path.rest_s:
-            wait_s = self._world.path.rest_s - self._world.motor_s() + 1e-6
-            left_s = timeout_s - (self._world.time_s() - began_s) - 2.0 * self._reply_s
-            self._world.clock.sleep_s(min(wait_s, left_s))
-            if left_s < wait_s:
-                self._halt()
-                raise MotionFailed(
-                    f"the origin was not reached within {timeout_s:g} s",
-                    device="stage",
-                    mend="allow more time, or see what holds the axis",
-                )
-        self._known, self._counter_from_m = True, 0.0
-        return self.state(timeout_s=max(self._reply_s, timeout_s))
 
     def start_move(self, target_m: float, speed_m_s: float, *, timeout_s: float) -> None:
         self._ask(timeout_s)
@@ -102,10 +89,13 @@ class SimulatedStage:
                 device="stage",
                 mend="give a target within the travel",
             )
-        if not self._known:
-            raise NotHomed("the axis does not know where it is", device="stage", mend="home it")
         with self._world.locked():
             self._refuse_motion()
+            self._end_homing()
+            if not self._known:
+                raise NotHomed(
+                    "the axis does not know where it is", device="stage", mend="home it first"
+                )
             target_m = min(max(self._rounded(target_m), low_m), high_m)
             self._world.path.go(target_m, speed_m_s, self._acceleration_m_s2, self._world.motor_s())
 
@@ -113,8 +103,15 @@ class SimulatedStage:
         self._ask(timeout_s)
         self._halt()
 
+    def _end_homing(self) -> None:
+        """Where the origin was reached, the counter is set there."""
+        if self._homing and self._world.motor_s() >= self._world.path.rest_s:
+            self._homing, self._known, self._counter_from_m = False, True, 0.0
+
     def _halt(self) -> None:
         with self._world.locked():
+            self._end_homing()
+            self._homing = False  # a homing cut short leaves the axis without an origin
             stalled = self._world.faults.active("stage stalled", self._world.time_s())
             self._world.path.halt(self._acceleration_m_s2, self._world.motor_s(), dead=stalled)
 
