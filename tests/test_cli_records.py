@@ -260,6 +260,24 @@ def test_no_journal_is_bad_input(tmp_path: Path, command: tuple[str, ...]) -> No
         assert json.loads(result.stdout)["schema"] == "evenarm.error/1"
 
 
+def test_the_journal_of_a_bench_is_found_through_its_description(
+    journal: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    asked = []
+
+    class Bench:
+        records_url = f"sqlite:///{journal}"
+
+    def open_bench(option: Path | None) -> Bench:
+        asked.append(option)
+        return Bench()
+
+    monkeypatch.setattr("bench.cli.benchfile.open_bench", open_bench)
+    assert json.loads(call("verify", "--json").stdout)["entries"] == 9
+    assert json.loads(call("list", "--json", "--bench", "b.toml").stdout)["entries"] == 9
+    assert asked == [None, Path("b.toml")]
+
+
 def test_an_empty_journal_is_no_error(tmp_path: Path) -> None:
     open_journal(tmp_path / "j", write=True).close()
     assert "No runs yet" in call("list", "--journal", tmp_path / "j").stdout

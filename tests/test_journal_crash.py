@@ -69,6 +69,15 @@ def test_a_killed_writer_loses_nothing_acknowledged(tmp_path: Path) -> None:
     assert kill_writers(tmp_path / "logs" / "journal.sqlite3", times=10, seed=7) > 100
 
 
+def test_what_a_writer_promises_is_what_it_asked_the_database_for(tmp_path: Path) -> None:
+    with open_journal(tmp_path / "journal.sqlite3", write=True) as journal:
+        store = journal._store
+        assert store.pragma("journal_mode") == "wal"
+        assert store.pragma("synchronous") == 2  # FULL: the log is on the disk at each commit
+        assert store.pragma("foreign_keys") == 1
+        assert store.pragma("busy_timeout") == 5000
+
+
 def test_a_second_writer_is_refused_and_told_who_holds_it(tmp_path: Path) -> None:
     path = tmp_path / "journal.sqlite3"
     with start_writer(path, "s") as writer:
@@ -203,6 +212,9 @@ def test_a_folder_without_permission(tmp_path: Path) -> None:
     path = tmp_path / "kept" / "journal.sqlite3"
     with open_journal(path, write=True) as journal:
         journal.append("note", {})
+    path.chmod(0o400)
+    with pytest.raises(JournalError, match="opened or written"):
+        open_journal(path, write=True)
     path.with_name("journal.sqlite3-writer").unlink()
     path.parent.chmod(0o500)
     try:

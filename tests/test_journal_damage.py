@@ -18,6 +18,7 @@ from hypothesis import strategies as st
 
 from bench.errors import JournalDamaged, JournalError
 from bench.journal import finite, measurements, open_journal, runs, verify
+from bench.journal.canonical import block_name, encode_block
 
 RUN = "20261201-0930-aaaa"
 
@@ -272,6 +273,34 @@ def test_a_missing_guard_is_noticed(whole: bytes, tmp_path: Path) -> None:
     assert verify(path).problems == ("the file: entries_no_update is missing",)
 
 
+def test_a_weakened_guard_is_noticed(whole: bytes, tmp_path: Path) -> None:
+    path = tmp_path / "journal.sqlite3"
+    copy(whole, path)
+    database = sqlite3.connect(path)
+    database.execute("DROP TRIGGER entries_no_update")
+    database.execute(
+        "CREATE TRIGGER entries_no_update BEFORE UPDATE ON entries WHEN 0 BEGIN SELECT 1; END"
+    )
+    database.close()
+    assert verify(path).problems == ("the file: the definition of entries_no_update was changed",)
+
+
+def test_readings_are_not_trusted_to_a_block_that_is_not_theirs(tmp_path: Path) -> None:
+    path = tmp_path / "journal.sqlite3"
+    columns = {"x": np.arange(4.0)}
+    with open_journal(path, write=True) as journal:
+        journal.append("note", {})
+        database = sqlite3.connect(path)
+        name = block_name(encode_block(columns))
+        database.execute("INSERT INTO blocks VALUES (1, ?, x'00')", (name,))
+        database.commit()
+        database.close()
+        with pytest.raises(JournalDamaged) as caught:
+            journal.append_readings("r", "s", columns)
+        assert name[:16] in caught.value.why
+        assert journal.head.entries == 1
+
+
 # --- what only a noted head can tell -------------------------------------------------------------
 
 
@@ -279,10 +308,10 @@ def cut_tail(database: sqlite3.Connection) -> None:
     database.execute("DELETE FROM entries WHERE seq > 9")
 
 
-def rewrite(database: sqlite3.Connection) -> None:
-    """Change entry 10 and forge every hash after it."""
+def rewrite(database: sqlite3.Connection, upto: int = 12) -> None:
+    """Change entry 10 and forge the hashes after it."""
     database.execute('UPDATE entries SET body = \'{"text":"forged"}\' WHERE seq = 10')
-    for seq in (10, 11, 12):
+    for seq in range(10, upto + 1):
         row = database.execute(
             "SELECT prev, seq, time_utc, bench_time_s, kind, run, body FROM entries WHERE seq = ?",
             (seq,),
@@ -290,7 +319,19 @@ def rewrite(database: sqlite3.Connection) -> None:
         lines = ["evenarm.entry/1", *("" if cell is None else str(cell) for cell in row)]
         forged = hashlib.sha256("\n".join(lines).encode()).hexdigest()
         database.execute("UPDATE entries SET sha256 = ? WHERE seq = ?", (forged, seq))
-        database.execute("UPDATE entries SET prev = ? WHERE seq = ?", (forged, seq + 1))
+        if seq < upto:
+            database.execute("UPDATE entries SET prev = ? WHERE seq = ?", (forged, seq + 1))
+
+
+def test_one_forged_entry_is_found_by_the_next(whole: bytes, tmp_path: Path) -> None:
+    path = tmp_path / "journal.sqlite3"
+    copy(whole, path)
+    with unguarded(path) as database:
+        rewrite(database, upto=10)
+    assert verify(path).problems == ("entry 11: it does not name the entry before it",)
+    with pytest.raises(JournalDamaged) as caught:
+        open_journal(path, write=True)
+    assert "entry 11" in caught.value.why
 
 
 @pytest.mark.parametrize("change", [cut_tail, rewrite])

@@ -293,10 +293,11 @@ def open_for_writing(path: Path, *, who: str, now: Callable[[], datetime]) -> Jo
         prepare(store)
         refuse_unless_journal(store)
         use_log(store)
-        with store.writing():
-            pass  # a file that cannot be written is found now, not at the first move
         journal = Journal(path, store, hold, now)
         _check_tail(journal)
+        with store.writing() as connection:
+            # Writes the header as it is: a file that takes nothing is found before the first move.
+            connection.exec_driver_sql("PRAGMA user_version=0")
     except BaseException:
         if store is not None:
             store.close()
