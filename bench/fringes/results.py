@@ -161,10 +161,13 @@ def coherence(solution: Solution, per_m: float, relative: float) -> CoherenceLen
 
 
 def residual_glass(solution: Solution, sign: float) -> ResidualGlass | None:
-    """Signed residual glass, positive for more in A; None where the axis has no length."""
+    """Signed residual glass, positive for more in A.
+
+    None where the axis has no length, or the fringes themselves served as the ruler.
+    """
     law, bend = solution.fit.dispersion, sign * solution.fit.bend
     u = math.sqrt(max(float(solution.covariance[-1, -1]), 0.0))
-    if law.fs2_per_bend is None:
+    if law.fs2_per_bend is None or solution.ruled:
         return None
     return ResidualGlass(
         material=law.material,

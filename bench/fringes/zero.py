@@ -113,9 +113,11 @@ def _least_squares(columns: FloatArray, values: FloatArray, hold: FloatArray) ->
 
     ``hold`` are the weights with which each unknown is held to zero.
     """
-    size, vectors = np.linalg.eigh(columns.T @ columns + np.diag(hold**2))
+    normal = columns.T @ columns + np.diag(hold**2)
+    column = np.sqrt(np.maximum(np.diag(normal), 1e-300))
+    size, vectors = np.linalg.eigh(normal / np.outer(column, column))
     keep = size > 1e-11 * size[-1]
-    part = vectors[:, keep]
+    part = vectors[:, keep] / column[:, None]
     return np.asarray(part @ ((part.T @ (columns.T @ values)) / size[keep]), dtype=np.float64)
 
 
@@ -222,9 +224,11 @@ def fit_packet(
     jacobian = np.hstack([levels, cosine, phases]) * root[:, None]
     full = np.vstack([jacobian, bottom])
     n = x.size
-    size, vectors = np.linalg.eigh(full.T @ full)
-    keep = size > 1e-12 * size[-1]
-    half = vectors[:, keep] / np.sqrt(size[keep])
+    normal = full.T @ full
+    column = np.sqrt(np.maximum(np.diag(normal), 1e-300))
+    size, vectors = np.linalg.eigh(normal / np.outer(column, column))
+    keep = size > 1e-11 * size[-1]
+    half = vectors[:, keep] / np.sqrt(size[keep]) / column[:, None]
     left = full @ half
     gain = (half @ left[:n].T) * root[None, :]
     gain[-3:] *= units[:, None]
