@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import sys
+import time
 from pathlib import Path
 
 import pytest
@@ -21,13 +22,23 @@ def screen_text(app: EvenarmApp) -> str:
     return "\n".join("".join(segment.text for segment in strip).rstrip() for strip in strips)
 
 
+async def settled_text(app: EvenarmApp) -> str:
+    """The screen's text once it is complete and has stayed the same over several looks."""
+    end_s = time.monotonic() + 20.0
+    text, same = "", 0
+    while same < 3 and time.monotonic() < end_s:
+        await asyncio.sleep(0.02)  # the screen library lays out at most sixty times a second
+        app.poll()
+        before, text = text, screen_text(app)
+        same = same + 1 if text == before and "SOFTWARE STOP" in text else 0
+    return text
+
+
 async def _shown(at: str, size: tuple[int, int], glyphs: Glyphs, presses: tuple[str, ...]) -> str:
     app = EvenarmApp(FakeControl(at), glyphs=glyphs)
     async with app.run_test(size=size) as pilot:
-        await pilot.pause()
         await pilot.press(*presses)
-        await pilot.pause()
-        return screen_text(app)
+        return await settled_text(app)
 
 
 def shown(
@@ -78,11 +89,9 @@ def test_a_resize_is_followed() -> None:
     async def resized() -> tuple[str, str]:
         app = EvenarmApp(FakeControl("located"))
         async with app.run_test(size=(120, 40)) as pilot:
-            await pilot.pause()
+            await settled_text(app)
             await pilot.resize_terminal(80, 24)
-            app.poll()
-            await pilot.pause()
-            return screen_text(app), shown_small
+            return await settled_text(app), shown_small
 
     shown_small = shown("located", (80, 24))
     after, small = asyncio.run(resized())

@@ -60,6 +60,7 @@ class EvenarmApp(App[int]):
     """One run on the screen. ``run()`` returns after the operator has left; see ``exit_status``."""
 
     ENABLE_COMMAND_PALETTE = False
+    AUTO_FOCUS = None  # the line for a name takes keys only while a name is asked for
     TITLE = "Evenarm"
 
     BINDINGS: ClassVar[list[BindingType]] = [
@@ -88,7 +89,7 @@ class EvenarmApp(App[int]):
     #zero { height: 8; margin: 0 0 0 0; }
     #scan { height: 1fr; }
     #foot { height: 1; dock: bottom; }
-    #question { height: 1fr; }
+    #question { height: 1fr; display: none; }
     #question-title, #question-hint { height: 1; }
     #question-scroll { height: 1fr; scrollbar-size: 0 0; background: $background; }
     #question-words { height: auto; }
@@ -144,7 +145,7 @@ class EvenarmApp(App[int]):
 
     def on_mount(self) -> None:
         self.set_interval(POLL_S, self.poll)
-        self.poll()
+        self.call_after_refresh(self.poll)
 
     def _look(self) -> None:
         """Take a fresh snapshot of the run."""
@@ -190,7 +191,9 @@ class EvenarmApp(App[int]):
         base.query_one("#scan").display = not asking
         panel.show(self.scene.question if not self.scene.asking_to_leave else None)
         if asking:
-            self.scene = replace(self.scene, more_below=panel.more_below)
+            read = panel.read_to_end
+            note = "" if read and self.scene.note == self._unread_note else self.scene.note
+            self.scene = replace(self.scene, more_below=panel.more_below, note=note)
         for part in base.query(Panel):
             part.repaint()
 
@@ -245,8 +248,12 @@ class EvenarmApp(App[int]):
     def _read_to_end(self) -> bool:
         if self.screen_stack[0].query_one(QuestionPanel).read_to_end:
             return True
-        self._remark(f"Read to the end first: {self.scene.glyphs.down} key.")
+        self._remark(self._unread_note)
         return False
+
+    @property
+    def _unread_note(self) -> str:
+        return f"Read to the end first: {self.scene.glyphs.down} key."
 
     def _remark(self, words: str) -> None:
         self.scene = replace(self.scene, note=words)

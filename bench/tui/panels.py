@@ -52,6 +52,10 @@ class Panel(Static):
         rows = 0 if self._shown is None else self._shown.plain.count("\n") + 1
         return 0 < rows <= self.size.height
 
+    def unsettle(self) -> None:
+        """What was painted belongs to something else now."""
+        self._shown = None
+
     def on_resize(self, _: Resize) -> None:
         self._shown = None
         self.repaint()
@@ -95,6 +99,10 @@ class QuestionPanel(Vertical):
     @property
     def read_to_end(self) -> bool:
         """Whether the last row has been on the screen since this question was opened."""
+        words = self.query_one("#question-words", Panel)
+        shown = words.settled and self._scroller.size.height > 0
+        if self._question is not None and shown and not self.more_below:
+            self._read_to_end = True
         return self._read_to_end
 
     @property
@@ -119,6 +127,7 @@ class QuestionPanel(Vertical):
         self.query_one("#question-line").display = typed
         if fresh:
             self._read_to_end = False
+            self.query_one("#question-words", Panel).unsettle()
             line.value = ""
             self._scroller.scroll_home(animate=False, immediate=True)
         if typed and not line.has_focus:
@@ -127,9 +136,6 @@ class QuestionPanel(Vertical):
             self.screen.set_focus(None)
         for panel in self.query(Panel):
             panel.repaint()
-        words = self.query_one("#question-words", Panel)
-        if not fresh and words.settled and self._scroller.size.height > 0 and not self.more_below:
-            self._read_to_end = True
 
     def scroll_by(self, rows: int) -> None:
         """Scroll the words; ``rows`` counts down."""
