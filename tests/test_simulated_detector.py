@@ -224,14 +224,26 @@ def test_hum_has_its_frequency_and_amplitude() -> None:
     assert np.std(rest, ddof=3) == pytest.approx(2e-3, rel=5.0 / math.sqrt(40_000))
 
 
+def test_hum_is_averaged_over_the_integration() -> None:
+    _, detector, _ = opened(
+        {**QUIET, "detector.hum.frequency": 50.0, "detector.hum.amplitude": 10e-3},
+        detector={"rate_hz": 97.0, "integration_s": 5e-3},
+    )
+    signal = detector.read(9_700, timeout_s=200.0).signal
+    # Mean of a sine over a quarter of its period: sinc(1/4) of the amplitude, from the definition.
+    assert math.sqrt(2.0) * np.std(signal) == pytest.approx(10e-3 * np.sinc(0.25), rel=1e-3)
+
+
 def test_converter_has_its_steps() -> None:
     _, detector, _ = opened({"detector.adc_bits": 8, "detector.noise": 0.1})
-    signal = detector.read(5_000, timeout_s=60.0).signal
+    signal = detector.read(20_000, timeout_s=60.0).signal
     counts = signal / (5.0 / 255.0)
     np.testing.assert_allclose(counts, np.rint(counts), atol=1e-9)
     # Rounding adds q^2 / 12 (Widrow and Kollar 2008, Quantization Noise, section 1.2).
     variance = 0.1**2 + (5.0 / 255.0) ** 2 / 12.0
-    assert np.var(signal, ddof=1) == pytest.approx(variance, rel=5.0 * math.sqrt(2.0 / 5_000))
+    assert np.var(signal, ddof=1) == pytest.approx(variance, rel=5.0 * math.sqrt(2.0 / 20_000))
+    # and moves no mean where the noise is wider than a step.
+    assert np.mean(signal) == pytest.approx(0.02 + 1.0 / 0.6, abs=5.0 * 0.1 / math.sqrt(20_000))
 
 
 def test_what_leaves_the_range_is_clipped_and_flagged() -> None:

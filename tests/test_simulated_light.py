@@ -90,6 +90,18 @@ def test_a_laser_of_one_megahertz_has_fringes_all_along_the_bench() -> None:
     np.testing.assert_allclose(modulus(fringes, reach_m), expected, atol=1e-4)
 
 
+@pytest.mark.parametrize("fwhm_m", [1e-30, 1.3e-21, 1.3e-18])
+def test_no_laser_is_too_narrow(fwhm_m: float) -> None:
+    for shape in ("gaussian", "lorentzian", "rectangular"):
+        fringes = packet(lamp({"shape": shape, "centre_m": 632.991e-9, "fwhm_m": fwhm_m}))
+        opd_m = np.asarray([0.0, 1e-3, 0.3])
+        # exp(-pi 0.0033/m 0.3 m) is the least that is left, of a Lorentzian of 1 MHz.
+        np.testing.assert_allclose(modulus(fringes, opd_m), 1.0, atol=4e-3)
+        turned = fringes.fringes(opd_m) / modulus(fringes, opd_m)
+        expected = np.cos(2.0 * math.pi * (opd_m / 632.991e-9 % 1.0))
+        np.testing.assert_allclose(turned, expected, atol=1e-3)
+
+
 def test_sodium_doublet_comes_back() -> None:
     # The yellow lines at 588.995 and 589.592 nm beat over l1 l2 / (l2 - l1) = 0.5817 mm of OPD
     # (wavelengths of the lines from memory; the period is arithmetic).

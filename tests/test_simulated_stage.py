@@ -56,6 +56,13 @@ def test_moves_take_as_long_as_they_must(distance_m: float, duration_s: float) -
     assert path.command_m(3.0 + 0.5 * duration_s) == pytest.approx(5e-3 + 0.5 * distance_m)
 
 
+@pytest.mark.parametrize("distance_m", [0.0, 5e-324, 1e-16])
+def test_a_move_to_where_it_is_takes_no_time(distance_m: float) -> None:
+    path = Path(0.0, 3.0, Mechanics())
+    path.go(distance_m, 1e-3, 1e-2, 3.0)
+    assert path.rest_s == 3.0
+
+
 def test_speed_and_acceleration_stay_within_what_was_asked() -> None:
     path = Path(0.0, 0.0, Mechanics())
     path.go(2e-3, 0.7e-3, 1e-2, 0.0)

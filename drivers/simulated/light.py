@@ -29,6 +29,7 @@ ComplexArray = NDArray[np.complex128]
 LIGHT_M_PER_S = 299_792_458.0  # exact, by definition of the metre
 SECOND_RADIATION_M_K = 1.438776877e-2  # h c / k, CODATA 2018
 TOLERANCE = 1e-4  # of the fringe amplitude, table and quadrature together; held by a test
+_NARROWEST = 1e-6  # 1/m: coherent over a thousand kilometres, which no bench can tell from more
 _OVERSAMPLING = 12  # table points for each period of the fastest beat within the spectrum
 _MOST_POINTS = 1 << 21  # of a table: 32 MB
 
@@ -91,9 +92,11 @@ def lamp(spectrum: Mapping[str, Any]) -> Lamp:
     else:
         half_m = 0.5 * float(spectrum["fwhm_m"])
         _require(0.0 < half_m < centre_m, "a width must be positive and narrower than 2 x centre")
-        low, high = 1.0 / (centre_m + half_m), 1.0 / (centre_m - half_m)
-        centre, fwhm = 0.5 * (low + high), high - low
+        # 1 / (centre - half) -+ 1 / (centre + half), without the digits that a laser would lose.
+        product = (centre_m - half_m) * (centre_m + half_m)
+        centre, fwhm = centre_m / product, 2.0 * half_m / product
     _require(fwhm > 0.0, "a spectrum needs a positive width")
+    fwhm = max(fwhm, _NARROWEST)
     edges = (0.4 * centre, 2.5 * centre)  # no optics passes more than that
     faint = math.log(2.0 / TOLERANCE)
     if shape == "gaussian":

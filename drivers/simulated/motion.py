@@ -92,7 +92,7 @@ class Path:
             raise ValueError("the axis still moves")
         start_m = self._knots[-1].position_m
         distance_m = abs(target_m - start_m)
-        if distance_m == 0.0:
+        if distance_m < 1e-15:  # below the rounding of any position: there already
             return
         sign = 1 if target_m > start_m else -1
         peak_m_s = min(speed_m_s, math.sqrt(distance_m * acceleration_m_s2))
