@@ -27,6 +27,7 @@ ENVELOPE_FWHM = 4.0 * LOG2 / np.pi  # of a Gaussian packet times its half-power 
 FLOOR_KNOWN = 1e-4
 FLOOR_BLIND = 1e-3
 ACCEPT = 1e-3
+PURE = 100.0
 
 
 @dataclass(frozen=True)
@@ -91,6 +92,12 @@ def search_band(
     )
 
 
+def _everywhere(x: FloatArray) -> Candidate:
+    """Fringes through the whole scan, and nothing else."""
+    nan = float("nan")
+    return Candidate(float(x[0]), nan, nan, nan, nan, nan, 0.0, 1.0, 1.0, steady=True)
+
+
 def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
     """Find where energy is localised in place and frequency; ``x`` rising, None where nowhere.
 
@@ -105,6 +112,7 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
     step = span / (count - 1)
     best: tuple[float, float, float, float, float, float, float] | None = None
     steady = 0.0  # energy a reading of the strongest frequency present nearly everywhere
+    purity = 0.0  # of that frequency over the usual one
     length = 16
     while length <= count // 3:
         hop = max(1, length // 4)
@@ -117,12 +125,14 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
         power = np.abs(np.fft.rfft(windows * shape, axis=1)) ** 2 / np.sum(shape**2)
         cycles = np.arange(power.shape[1])
         usual = np.median(power, axis=0) / LOG2
-        usual = np.maximum(usual, 1e-12 * float(power.max()))
+        usual = np.maximum(usual, max(1e-12 * float(power.max()), 1e-300))
         # fewer than two cycles in a tile is level, not fringes; the last bins are beyond trust
         use = slice(2, max(3, int(0.8 * power.shape[1])))
         score = power[:, use] * (cycles[use] / length) ** 2
         throughout = np.percentile(score, 25, axis=0)
-        steady = max(steady, float(np.max(throughout)) / length)
+        pure = float(np.max(throughout)) / max(float(np.median(throughout)), 1e-300)
+        if float(np.max(throughout)) / length > steady:
+            steady, purity = float(np.max(throughout)) / length, pure
         excess = power[:, use] / usual[use]
         places = power.shape[0] / 2.0
         allowed = excess > 3.0 * np.log(4.0 * power.size)
@@ -143,7 +153,7 @@ def search_blind(x: FloatArray, signal: FloatArray) -> Candidate | None:
                 )
         length *= 2
     if best is None:
-        return None
+        return _everywhere(x) if purity > PURE else None
     _, place, frequency, width, excess_, places_, strong_ = best
     half = 0.75 / width
     return Candidate(

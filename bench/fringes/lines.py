@@ -18,10 +18,16 @@ POWER_OVER_MEDIAN = 25.0
 STEADY = 0.35
 
 
-def remove_lines(u: FloatArray, flat: FloatArray, outside: BoolArray) -> FloatArray:
+def remove_lines(
+    u: FloatArray,
+    flat: FloatArray,
+    outside: BoolArray,
+    spare: tuple[float, float] | None = None,
+) -> FloatArray:
     """What to subtract from the readings, shape (n,): zero where no steady line is found.
 
     ``u`` rising; ``flat`` with the slow level removed; ``outside`` marks readings off the packet.
+    Lines within the band ``spare`` (as sampled, folded where it is undersampled) are left alone.
     Only nearly even spacing is handled; elsewhere hum is left to the uncertainty.
     """
     n = u.size
@@ -35,12 +41,15 @@ def remove_lines(u: FloatArray, flat: FloatArray, outside: BoolArray) -> FloatAr
     count = 1 << math.ceil(math.log2(2 * n))
     cell = np.minimum(np.round((u - u[0]) / usual).astype(np.int64), count - 1)
     rest = np.where(outside, flat, 0.0)
+    kept = _bins_of(spare, count, usual, n)
     for _ in range(MOST_LINES):
         filled = np.bincount(cell, rest, minlength=count)[:count]
         power = np.abs(np.fft.rfft(filled)) ** 2
+        usual_power = float(np.median(power))
         power[: max(4, count // n * 3)] = 0.0
+        power[kept[: power.size]] = 0.0
         top = int(np.argmax(power))
-        if power[top] < POWER_OVER_MEDIAN * float(np.median(power)) or top >= power.size - 1:
+        if power[top] <= POWER_OVER_MEDIAN * usual_power or top == 0 or top >= power.size - 1:
             break
         a, b, c = np.sqrt(power[top - 1 : top + 2])
         bend = float(a - 2.0 * b + c)
@@ -52,6 +61,20 @@ def remove_lines(u: FloatArray, flat: FloatArray, outside: BoolArray) -> FloatAr
         found += line
         rest = np.where(outside, flat - found, 0.0)
     return found
+
+
+def _bins_of(band: tuple[float, float] | None, count: int, step: float, readings: int) -> BoolArray:
+    """Bins of the transform where the band, twice as wide as given, shows when sampled at step."""
+    marked = np.zeros(count // 2 + 1, dtype=bool)
+    if band is None:
+        return marked
+    middle, half = 0.5 * (band[0] + band[1]), band[1] - band[0]
+    cycles = np.linspace(middle - half, middle + half, 4 * count) * step
+    folded = np.abs(cycles - np.round(cycles))
+    marked[np.round(folded * count).astype(np.int64)] = True
+    reach = max(1, 2 * count // readings)
+    wide = np.convolve(marked, np.ones(2 * reach + 1), mode="same") > 0.5
+    return np.asarray(wide, dtype=np.bool_)
 
 
 def _steady_line(

@@ -28,7 +28,7 @@ from bench.fringes.notices import at_the_edge, notices_of
 from bench.fringes.results import Solution
 from bench.fringes.solve import solve
 from bench.fringes.trend import flat_tops, lone_spikes, robust_spread, slow_level
-from bench.fringes.verdict import EVERYWHERE, judge
+from bench.fringes.verdict import EVERYWHERE, LINE, judge
 from bench.fringes.window import Window, settle
 
 LEAST_READINGS = 24
@@ -53,13 +53,16 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     band = None
     if known.band is not None and per_m is not None:
         band = (known.band[0] * per_m, known.band[1] * per_m)
+    signal = signal - _steady_hum(u, signal, band)
     candidate, flat = _candidate(u, signal, band)
     if candidate is None:
         return _refused("nothing rises above the noise like a packet", 1.0, notices, flat)
-    window = settle(u, flat, candidate, band_known=band is not None)
-    reason, false_alarm = judge(u, flat, candidate, window)
+    window = None
+    if not candidate.steady:
+        window = settle(u, flat, candidate, band_known=band is not None)
+    reason, false_alarm = judge(u, flat, candidate, window, band_known=band is not None)
     if reason or window is None:
-        if reason == EVERYWHERE:
+        if reason in (EVERYWHERE, LINE):
             notices.append(Notice("monochromatic", reason))
         weakest = _weakest_contrast(candidate, signal, scan.dark)
         return _refused(reason, false_alarm, notices, flat, weakest)
@@ -94,6 +97,14 @@ def _usable(scan: Scan) -> tuple[FloatArray, FloatArray, list[Notice]]:
         notices.append(Notice("outliers", f"{int(spikes.sum())} lone spikes were left out"))
     keep = ~(clipped | spikes)
     return x[keep], signal[keep], notices
+
+
+def _steady_hum(u: FloatArray, signal: FloatArray, band: tuple[float, float] | None) -> FloatArray:
+    """Lines outside a known band, which would leak into it at the scan's ends."""
+    if band is None:
+        return np.zeros_like(signal)
+    flat = signal - slow_level(u, signal, 4.0 * ENVELOPE_FWHM / (band[1] - band[0]))
+    return remove_lines(u, flat, np.ones(u.size, dtype=bool), band)
 
 
 def _candidate(

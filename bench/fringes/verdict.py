@@ -6,7 +6,7 @@ import math
 
 import numpy as np
 
-from bench.fringes.detect import ACCEPT, FLOOR_KNOWN, Candidate
+from bench.fringes.detect import ACCEPT, ENVELOPE_FWHM, FLOOR_KNOWN, Candidate
 from bench.fringes.model import FloatArray
 from bench.fringes.spectrum import polynomial
 from bench.fringes.window import Window
@@ -15,8 +15,11 @@ from bench.fringes.zero import LinearFit, envelope_of, fit_linear
 EVERYWHERE = "fringes everywhere, no packet"
 NOTHING = "nothing rises above the noise like a packet"
 STEP = "the signal jumps there: a step, not a packet"
+SLOW = "the signal wanders there without fringes of its own: no packet"
+LINE = "the fringes there are a line's, not the source's: no packet"
 FEW_PLACES = 10.0
 STRENGTH = 1e-4
+LONGEST = 6.0
 
 
 def f_tail(ratio: float, above: float, below: float) -> float:
@@ -59,14 +62,14 @@ def is_step(part: FloatArray, values: FloatArray, residual_energy: float) -> boo
 
 def carried_by_few(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool:
     """Whether the energy of the band vanishes with the few largest readings."""
-    count = max(3, part.size // 40)
+    count = max(4, part.size // 16)
     keep = np.ones(part.size, dtype=bool)
     keep[np.argsort(np.abs(values - fit.level))[-count:]] = False
     if int(keep.sum()) < 2 * fit.frequency.size + 8:
         return False
     again = fit_linear(part[keep], values[keep], fit.origin, fit.frequency, np.ones(keep.sum()))
     _, chance = strength(values[keep], again)
-    return chance > 1e-3
+    return chance > 0.02
 
 
 def ends_over_top(part: FloatArray, fit: LinearFit) -> tuple[float, float]:
@@ -78,8 +81,36 @@ def ends_over_top(part: FloatArray, fit: LinearFit) -> tuple[float, float]:
     return float(size[:edge].mean()) / top, float(size[-edge:].mean()) / top
 
 
+def is_line(fit: LinearFit, candidate: Candidate, width: float) -> bool:
+    """Whether the fringes are far purer, or far longer, than the source's band can make them.
+
+    Glass lengthens a packet but leaves its spectrum as wide as it was.
+    """
+    power = np.abs(fit.c) ** 2
+    mean = float(np.sum(power * fit.frequency) / np.sum(power))
+    rms = float(np.sqrt(np.sum(power * (fit.frequency - mean) ** 2) / np.sum(power)))
+    size = candidate.high - candidate.low
+    return rms < 0.12 * size or width > LONGEST * ENVELOPE_FWHM / size
+
+
+def is_slow(fit: LinearFit, width: float) -> bool:
+    """Whether the spectrum only falls from low frequencies, or holds less than a fringe and a half.
+
+    A bump in a lamp's level does; the fringes of any source have a lowest frequency.
+    """
+    size = np.abs(fit.c)
+    top = float(size.max())
+    mean = float(np.sum(size**2 * fit.frequency) / np.sum(size**2))
+    return bool(float(size[:2].max()) > 0.45 * top or mean * width < 1.2)
+
+
 def judge(
-    u: FloatArray, flat: FloatArray, candidate: Candidate, window: Window | None
+    u: FloatArray,
+    flat: FloatArray,
+    candidate: Candidate,
+    window: Window | None,
+    *,
+    band_known: bool,
 ) -> tuple[str, float]:
     """Why this is no packet (empty where it is one), and the false-alarm probability."""
     if candidate.steady:
@@ -92,15 +123,19 @@ def judge(
     fit = window.fit
     _, chance = strength(values, fit)
     few = candidate.places < FEW_PLACES
-    if few:
+    if few or not band_known:
         chance = min(1.0, chance * candidate.places)
     false_alarm = max(chance, FLOOR_KNOWN if few else candidate.false_alarm)
-    if chance > (ACCEPT if few else STRENGTH):
+    if chance > (ACCEPT if few or not band_known else STRENGTH):
         return NOTHING, false_alarm
     if candidate.false_alarm > ACCEPT and not few:
         return EVERYWHERE, candidate.false_alarm
     if min(ends_over_top(part, fit)) > 0.6:
         return EVERYWHERE, 1.0
+    if band_known and is_line(fit, candidate, window.width):
+        return LINE, 1.0
+    if not band_known and is_slow(fit, window.width):
+        return SLOW, 1.0
     if is_step(part, values, float(np.sum(fit.residual**2))):
         return STEP, 1.0
     if carried_by_few(part, values, fit):

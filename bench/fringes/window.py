@@ -98,6 +98,8 @@ def _settle(
             # what a cut packet leaves undetermined can ring anywhere: stay with the correlation
             left = max(left, candidate.x - centre - 1.2 * width)
             right = min(right, candidate.x - centre + 1.2 * width)
+        if right - left < 0.2 * width:
+            return result
         fine = np.linspace(left, right, 8 * frequency.size + 1)
         peak, seen = full_width(fine, np.abs(envelope_of(fit, fine)))
         seen = max(seen, narrowest)
