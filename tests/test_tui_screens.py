@@ -5,6 +5,7 @@ from __future__ import annotations
 import asyncio
 import sys
 import time
+from collections.abc import Iterable
 from pathlib import Path
 
 import pytest
@@ -14,6 +15,8 @@ from test_tui_fake import VIEWS, FakeControl
 
 from bench.tui.app import EvenarmApp
 from bench.tui.glyphs import ASCII, FULL, Glyphs
+
+SMALL, LARGE = (80, 24), (120, 40)
 
 
 def screen_text(app: EvenarmApp) -> str:
@@ -34,65 +37,78 @@ async def settled_text(app: EvenarmApp) -> str:
     return text
 
 
-async def _shown(at: str, size: tuple[int, int], glyphs: Glyphs, presses: tuple[str, ...]) -> str:
-    app = EvenarmApp(FakeControl(at), glyphs=glyphs)
-    async with app.run_test(size=size) as pilot:
-        await pilot.press(*presses)
-        return await settled_text(app)
+def shown(moments: Iterable[str], size: tuple[int, int], glyphs: Glyphs = FULL) -> dict[str, str]:
+    """The screen at each of ``moments``, one after the other."""
+
+    async def session() -> dict[str, str]:
+        control = FakeControl("before")
+        app = EvenarmApp(control, glyphs=glyphs)
+        texts = {}
+        async with app.run_test(size=size):
+            for at in moments:
+                control.started = at != "before"
+                control.go(at)
+                texts[at] = await settled_text(app)
+        return texts
+
+    return asyncio.run(session())
 
 
-def shown(
-    at: str, size: tuple[int, int], glyphs: Glyphs = FULL, presses: tuple[str, ...] = ()
-) -> str:
-    return asyncio.run(_shown(at, size, glyphs, presses))
+@pytest.mark.parametrize("size", [SMALL, LARGE], ids=["80x24", "120x40"])
+def test_screens(size: tuple[int, int], snapshot) -> None:
+    for at, text in shown(VIEWS, size).items():
+        assert len(text.splitlines()) == size[1]
+        assert text == snapshot(name=at)
 
 
-@pytest.mark.parametrize("size", [(80, 24), (120, 40)], ids=["80x24", "120x40"])
-@pytest.mark.parametrize("at", list(VIEWS))
-def test_screen(at: str, size: tuple[int, int], snapshot) -> None:
-    text = shown(at, size)
-    assert len(text.splitlines()) == size[1]
-    assert text == snapshot
+def test_a_screen_does_not_depend_on_those_before_it() -> None:
+    # a question that was opened and closed leaves nothing behind
+    order = ["caution", "located", "confirm", "accepted"]
+    there = shown(order, SMALL)
+    for at in order:
+        assert shown([at], SMALL)[at] == there[at]
 
 
-def test_screen_in_plain_ascii(snapshot) -> None:
-    text = shown("located", (80, 24), ASCII)
-    assert text.isascii()
-    assert text == snapshot
-
-
-def test_a_question_in_plain_ascii_is_plain_too() -> None:
-    assert shown("caution", (80, 24), ASCII).isascii()
+def test_screens_in_plain_ascii(snapshot) -> None:
+    for at, text in shown(["caution", "located", "rejected"], SMALL, ASCII).items():
+        assert text.isascii()
+        assert text == snapshot(name=at)
 
 
 def test_other_colours_change_no_word() -> None:
-    plain = shown("located", (80, 24))
-    for presses in (("f4",), ("f4", "f4")):
-        assert shown("located", (80, 24), presses=presses) == plain
+    async def session() -> list[str]:
+        app = EvenarmApp(FakeControl("located"))
+        texts = []
+        async with app.run_test(size=SMALL) as pilot:
+            for _ in range(3):
+                texts.append(f"{app.scene.palette.name} {await settled_text(app)}")
+                await pilot.press("f4")
+        return texts
+
+    names, texts = zip(*(text.split(" ", 1) for text in asyncio.run(session())), strict=True)
+    assert names == ("evenarm-dark", "evenarm-bright", "evenarm-red")
+    assert len(set(texts)) == 1
 
 
-@pytest.mark.parametrize("at", ["caution", "located", "rejected"])
-def test_without_colour_the_screen_says_the_same(at: str, monkeypatch) -> None:
-    coloured = shown(at, (80, 24))
+def test_without_colour_the_screen_says_the_same(monkeypatch) -> None:
+    moments = ["caution", "located", "rejected"]
+    coloured = shown(moments, SMALL)
     monkeypatch.setenv("NO_COLOR", "1")
-    assert shown(at, (80, 24)) == coloured
+    assert shown(moments, SMALL) == coloured
 
 
 @pytest.mark.parametrize("size", [(40, 10), (20, 5), (200, 60)])
-@pytest.mark.parametrize("at", ["caution", "located", "rejected"])
-def test_odd_sizes_keep_the_stop_key(at: str, size: tuple[int, int]) -> None:
-    rows = shown(at, size).splitlines()
-    assert rows[-1].startswith(" F8 SOFTWARE STOP")
+def test_odd_sizes_keep_the_stop_key(size: tuple[int, int]) -> None:
+    for text in shown(["caution", "located", "rejected"], size).values():
+        assert text.splitlines()[-1].startswith(" F8 SOFTWARE STOP")
 
 
 def test_a_resize_is_followed() -> None:
-    async def resized() -> tuple[str, str]:
+    async def resized() -> str:
         app = EvenarmApp(FakeControl("located"))
-        async with app.run_test(size=(120, 40)) as pilot:
+        async with app.run_test(size=LARGE) as pilot:
             await settled_text(app)
-            await pilot.resize_terminal(80, 24)
-            return await settled_text(app), shown_small
+            await pilot.resize_terminal(*SMALL)
+            return await settled_text(app)
 
-    shown_small = shown("located", (80, 24))
-    after, small = asyncio.run(resized())
-    assert after == small
+    assert asyncio.run(resized()) == shown(["located"], SMALL)["located"]
