@@ -329,6 +329,16 @@ def test_the_zero_is_written_with_its_uncertainty() -> None:
     assert "13.218 401(12) mm" in zero_text(scene("located", glyphs=ASCII), 60).plain
 
 
+def test_a_zero_known_to_many_digits_is_still_large() -> None:
+    view = dataclasses.replace(
+        FOUND, zero_m=12.8516536e-3, zero_standard_uncertainty_m=2.7e-9, half_width_m=5.3e-9
+    )
+    rows = zero_text(dataclasses.replace(scene("located"), view=view), 53).plain.splitlines()
+    assert rows[1].count("█") + rows[1].count("▀") + rows[1].count("▄") > 10
+    assert rows[3].endswith("(27) mm")
+    assert all(cell_len(row) <= 53 for row in rows)
+
+
 def test_an_unknown_zero_is_not_a_number() -> None:
     view = dataclasses.replace(BEFORE, zero_m=None, half_width_m=None, half_width_start_m=None)
     text = zero_text(dataclasses.replace(scene("before"), view=view), 60).plain

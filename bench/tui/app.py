@@ -132,7 +132,7 @@ class EvenarmApp(App[int]):
         with Horizontal(id="body"):
             with Vertical(id="left"):
                 yield Panel(lambda w, h: steps_text(self.scene, w, h), id="steps")
-                yield Panel(lambda width, _: bench_text(self.scene, width), id="bench")
+                yield Panel(lambda w, _: bench_text(self.scene, w), id="bench", grows=True)
             with Vertical(id="right"):
                 yield Panel(self._zero, id="zero", grows=True)
                 yield Panel(lambda w, h: scan_text(self.scene, w, h), id="scan")

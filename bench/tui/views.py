@@ -212,12 +212,13 @@ def bench_text(scene: Scene, width: int) -> Text:
     rows = [title_row("BENCH", width, scene)]
     doing = view.doing or ("idle" if not view.stage_moving else "moving")
     wrapped = [*textwrap.wrap(glyphs.text(printable(doing)), max(8, width))[:2], ""][:2]
+    wrapped = [row for row in wrapped if row or not scene.finished]
     rows += [Text(fitted(row, width, glyphs).rstrip(), style=palette.text) for row in wrapped]
     if view.progress is not None and not scene.finished:
         share = f" {100 * max(0.0, min(1.0, view.progress)):3.0f} %"
         bar = _filled(view.progress, width - len(share), glyphs)
         rows.append(Text(bar + share, style=palette.signal))
-    else:
+    elif not scene.finished:  # so that nothing jumps while a run goes on
         rows.append(Text(""))
 
     def line(label: str, words: str, style: str) -> None:
@@ -289,10 +290,16 @@ def zero_text(scene: Scene, width: int, *, compact: bool = False) -> Text:
         row.append_text(_sureness(scene, max(0, width - cell_len(row.plain))))
         row.truncate(width)
         return Text("\n").join([rows[0], row])
-    drawn = letters.large(number, width - len(unit) - 1, glyphs)
+    # Where not all of it fits in large figures, the uncertainty follows in small ones.
+    head, tail = number, unit
+    if letters.large_width(number, glyphs) + len(unit) + 1 > width:
+        cut = min((number.find(mark) for mark in "(±" if mark in number), default=len(number))
+        head, tail = number[:cut].rstrip(), f"{number[cut:]} {unit}".strip()
+    drawn = letters.large(head, width - len(tail) - 1, glyphs)
     for index, part in enumerate(drawn):
-        last = index == (2 if glyphs.braille and drawn[2] else 1)
-        rows.append(Text(f"{part} {unit}" if last and unit else part, style=style))
+        last = index == (2 if drawn[2] else 1)
+        words = glyphs.text(f"{part} {tail}" if last and tail else part)
+        rows.append(Text(words[:width], style=style))
     rows.append(_sureness(scene, width))
     widest = view.half_width_start_m
     if widest is not None:
