@@ -64,11 +64,11 @@ def remove_lines(
 
 
 def _bins_of(band: tuple[float, float] | None, count: int, step: float, readings: int) -> BoolArray:
-    """Bins of the transform where the band, twice as wide as given, shows when sampled at step."""
+    """Bins of the transform where the band, a fifth wider than given, shows sampled at step."""
     marked = np.zeros(count // 2 + 1, dtype=bool)
     if band is None:
         return marked
-    middle, half = 0.5 * (band[0] + band[1]), band[1] - band[0]
+    middle, half = 0.5 * (band[0] + band[1]), 0.6 * (band[1] - band[0])
     cycles = np.linspace(middle - half, middle + half, 4 * count) * step
     folded = np.abs(cycles - np.round(cycles))
     marked[np.round(folded * count).astype(np.int64)] = True

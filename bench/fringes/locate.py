@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
@@ -32,6 +33,7 @@ from bench.fringes.verdict import EVERYWHERE, LINE, judge
 from bench.fringes.window import Window, settle
 
 LEAST_READINGS = 24
+DROWNED = 0.3
 
 
 def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
@@ -53,10 +55,14 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     band = None
     if known.band is not None and per_m is not None:
         band = (known.band[0] * per_m, known.band[1] * per_m)
-    signal = signal - _steady_hum(u, signal, band)
+    steady = _steady_hum(u, signal, band)
+    signal = signal - steady
     candidate, flat = _candidate(u, signal, band)
     if candidate is None:
         return _refused("nothing rises above the noise like a packet", 1.0, notices, flat)
+    if candidate.amplitude < DROWNED * math.sqrt(2.0) * float(np.std(steady)):
+        # what taking out a far stronger line leaves behind is not trusted to be a packet
+        candidate = replace(candidate, steady=True)
     window = None
     if not candidate.steady:
         window = settle(u, flat, candidate, band_known=band is not None)
@@ -138,9 +144,9 @@ def _result(
     zero, cut = at_the_edge(u, window, fit, zero)
     notices += cut
     fringe = results.fringe_zero(solution, zero)
-    amplitude = results.peak_amplitude(solution, float(inside[0]), float(inside[-1]))
+    amplitude = results.peak_amplitude(solution.sizes, float(inside[0]), float(inside[-1]))
     level = float(np.interp(zero.value, inside, fit.level))
-    contrast = results.contrast(solution, zero.value, level, scan.dark)
+    contrast = results.contrast(solution.sizes, zero.value, level, scan.dark)
     notices += notices_of(u, signal, window, solution, amplitude, contrast)
     per_m = abs(scan.opd_per_x) * span if scan.opd_per_x else None
     relative = scan.opd_per_x_relative_uncertainty
@@ -150,7 +156,7 @@ def _result(
         notices.append(Notice("no-length", text))
     else:
         mean_wavelength = results.mean_wavelength(solution, per_m, relative)
-        coherence = results.coherence(solution, per_m, relative)
+        coherence = results.coherence(solution.sizes, per_m, relative)
         glass = results.residual_glass(solution, math.copysign(1.0, scan.opd_per_x or 1.0))
         at = mean_wavelength
         if known.at_wavelength_m is not None:

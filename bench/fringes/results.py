@@ -28,6 +28,12 @@ class Solution:
     covariance: FloatArray
     shares: NoiseShares
     ruled: bool = False  # whether positions were corrected by the fringes' own phase
+    unheld: Solution | None = None
+
+    @property
+    def sizes(self) -> Solution:
+        """For amplitudes and widths: the same fit without holding weak frequencies to zero."""
+        return self if self.unheld is None else self.unheld
 
     def mean_frequency(self) -> tuple[float, FloatArray]:
         """Amplitude-weighted mean frequency and its gradient for the amplitudes (k,)."""

@@ -115,14 +115,40 @@ def _rounds(
         wild = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
         solution = Solution(fit, covariance(fit, variance), shares)
         sizes = _expected_sizes(solution)
+        used = weight
         weight = np.where(wild, 1e-6, 1.0) / variance
         weight = weight / float(np.mean(weight))
         guesses = [(fit.shift, fit.bend)]
         mean, _ = solution.mean_frequency()
-        if not stated and turn < rounds - 1:
+        last = turn == rounds - 1
+        if last and rounds == ROUNDS:
+            solution = replace(
+                solution, unheld=_unheld(solution, part, values, used, start, bend_prior, far)
+            )
+        if not stated and not last:
             guesses = [(fit.shift - _delay(fit, mean), fit.bend)]
             reference = mean
     return solution
+
+
+def _unheld(
+    solution: Solution,
+    part: FloatArray,
+    values: FloatArray,
+    weight: FloatArray,
+    start: LinearFit,
+    bend_prior: float,
+    far: float,
+) -> Solution:
+    """The same packet with every amplitude free: less sure, but not drawn towards zero."""
+    fit = solution.fit
+    guess = (fit.shift, fit.bend)
+    free = fit_packet(
+        part, values, weight, start, fit.reference, fit.dispersion, bend_prior, guess, far
+    )
+    variance = solution.shares.variance(free.slope, free.fringes)
+    variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
+    return Solution(free, covariance(free, variance), solution.shares)
 
 
 def _expected_sizes(solution: Solution) -> FloatArray:

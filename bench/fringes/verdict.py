@@ -8,7 +8,7 @@ import numpy as np
 
 from bench.fringes.detect import ACCEPT, ENVELOPE_FWHM, FLOOR_KNOWN, Candidate
 from bench.fringes.model import FloatArray
-from bench.fringes.spectrum import polynomial
+from bench.fringes.spectrum import band_grid, polynomial
 from bench.fringes.window import Window
 from bench.fringes.zero import LinearFit, envelope_of, fit_linear
 
@@ -19,7 +19,7 @@ SLOW = "the signal wanders there without fringes of its own: no packet"
 LINE = "the fringes there are a line's, not the source's: no packet"
 FEW_PLACES = 10.0
 STRENGTH = 1e-4
-LONGEST = 6.0
+LONGEST = 3.5
 
 
 def f_tail(ratio: float, above: float, below: float) -> float:
@@ -65,8 +65,8 @@ def carried_by_few(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool
     count = max(4, part.size // 16)
     keep = np.ones(part.size, dtype=bool)
     keep[np.argsort(np.abs(values - fit.level))[-count:]] = False
-    if int(keep.sum()) < 2 * fit.frequency.size + 8:
-        return False
+    if int(keep.sum()) < 2 * fit.frequency.size + 6:
+        return True
     again = fit_linear(part[keep], values[keep], fit.origin, fit.frequency, np.ones(keep.sum()))
     _, chance = strength(values[keep], again)
     return chance > 0.02
@@ -121,8 +121,15 @@ def judge(
         return "too few readings on what may be a packet", candidate.false_alarm
     part, values = u[window.first : window.stop], flat[window.first : window.stop]
     fit = window.fit
+    if window.first == 0 or window.stop == u.size:
+        # a cut window holds fewer frequencies than the whole one that the fit is made for
+        grid = band_grid(
+            float(fit.frequency[0]), float(fit.frequency[-1]), float(part[-1] - part[0])
+        )
+        fit = fit_linear(part, values, fit.origin, grid, np.ones(part.size))
     _, chance = strength(values, fit)
-    few = candidate.places < FEW_PLACES
+    stretch = candidate.width * (candidate.high - candidate.low) / ENVELOPE_FWHM
+    few = candidate.places * (stretch if band_known else 1.0) < FEW_PLACES
     if few or not band_known:
         chance = min(1.0, chance * candidate.places)
     false_alarm = max(chance, FLOOR_KNOWN if few else candidate.false_alarm)
