@@ -253,6 +253,19 @@ def test_no_to_a_question_ends_the_run_with_nothing_moved():
     assert not [kind for kind in world.kinds() if kind.endswith("-intended")]
 
 
+def test_a_stop_does_not_make_an_unknown_position_known():
+    for happened in (
+        said.Stopped(5e-3, True, "key", 2.0),
+        said.Failed("silence", "stage", "look", 5e-3, True, 2.0),
+    ):
+        world = World(setup())
+        world.begin("Run r0 began to move the stage.", known=False)
+        world.feed(happened)
+        kept = next(e.body for e in world.events if e.kind in {"stopped", "move-failed"})
+        assert kept["position_known"] is False
+        assert kept["position_m"] is None
+
+
 def test_an_unattended_run_asks_nothing_and_says_who_answers():
     world = World(setup(unattended=True, by="Ada"))
     world.begin()

@@ -233,6 +233,7 @@ def test_an_attended_run_asks_and_records_the_names(tmp_path):
         if question is not None and question.id not in asked:
             asked.append(question.id)
             run.answer(question.id, "Kim\x1b[2J Lee" if question.kind == "acknowledge" else True)
+        run._ended.wait(0.01)
     run.close()
     assert run.error is None
     assert run.view().outcome == "accepted"

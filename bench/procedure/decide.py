@@ -59,10 +59,7 @@ def _decide(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...]
         case StopAsked():
             return (Event("stop-requested", {"by": happened.by, "reason": happened.reason}),)
         case Stopped():
-            stopped = {
-                "position_m": happened.position_m,
-                "position_known": happened.position_known,
-            }
+            stopped = _where(state, happened)
             return (Event("stopped", stopped), _end(setup, state, "stopped", happened.reason))
         case Failed():
             return _failed(setup, state, happened)
@@ -137,13 +134,21 @@ def _outcome(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...
             return ()
 
 
+def _where(state: RunState, happened: Stopped | Failed) -> dict[str, Any]:
+    """Where the stage came to rest: a position that was not known is not known by stopping there.
+
+    After a crash a controller may still claim one; only homing restores the trust.
+    """
+    known = happened.position_known and state.position_known
+    return {"position_m": happened.position_m if known else None, "position_known": known}
+
+
 def _failed(setup: Setup, state: RunState, happened: Failed) -> tuple[Event, ...]:
     body = {
         "what": happened.what,
         "device": happened.device,
         "mend": happened.mend,
-        "position_m": happened.position_m,
-        "position_known": happened.position_known,
+        **_where(state, happened),
     }
     reason = f"{happened.device}: {happened.what}"
     if happened.mend:
