@@ -22,7 +22,7 @@ def envelope_bound(noise: float, amplitude: float, rms_width: float, step: float
 
     (2 / pi^(1/4)) (q / A) sqrt(s D); ``rms_width`` is s, ``step`` is D. All arguments > 0.
     """
-    return 2.0 / math.pi**0.25 * noise / amplitude * math.sqrt(rms_width * step)
+    return 2.0 / float(math.pi**0.25) * noise / amplitude * math.sqrt(rms_width * step)
 
 
 def fringe_bound(
