@@ -213,12 +213,15 @@ def _frozen(edges: FloatArray, log_mass: FloatArray, log_outside: float) -> Beli
 def _thinned(
     edges: FloatArray, log_mass: FloatArray, keep_from_m: float, keep_to_m: float
 ) -> tuple[FloatArray, FloatArray]:
-    """Join neighbours outside the part to keep, until the grid is small again."""
+    """Join neighbours until the grid is small again, at first only outside the part to keep."""
+    spare = (edges >= keep_from_m) & (edges <= keep_to_m)
     while log_mass.size > _MOST_CELLS:
-        keep = (edges >= keep_from_m) & (edges <= keep_to_m)
+        # Many detections in one place leave many edges there: then that part is thinned too.
+        keep = spare if np.sum(spare) < _MOST_CELLS // 2 else np.zeros(edges.size, dtype=np.bool_)
+        keep = keep.copy()
         keep[::2] = True
         keep[[0, -1]] = True
         begin = np.flatnonzero(keep)[:-1]
         log_mass = np.logaddexp.reduceat(log_mass, begin)
-        edges = edges[keep]
+        edges, spare = edges[keep], spare[keep]
     return edges, log_mass

@@ -397,13 +397,14 @@ def _searched(task: _Task, chain: tuple[SourceFacts, ...], rest: tuple[Leg, ...]
             best = (expected, worst, total, order, times)
     assert best is not None
     expected, worst, total, order, times = best
+    changed = task.current is not None and change > 0.0
     half_width = INTERVAL_SDS * _sd_between(
         facts, source, way, chain[1] if len(chain) > 1 else task.final
     )
     legs = []
     for number, segment in enumerate(order):
         low, high = sorted(facts.approach * end for end in (segment.start, segment.stop))
-        why = why_search(facts, source, way, number=number, careful=task.careful, change_s=change)
+        why = why_search(facts, source, way, number=number, careful=task.careful, changed=changed)
         leg = _leg(facts, source, way, "search", low, high, half_width, why)
         time = float(times[number]) + (change if number == 0 else 0.0)
         legs.append(replace(leg, expected_time_s=time))

@@ -19,6 +19,7 @@ FloatArray = NDArray[np.float64]
 
 __all__ = ["Cells", "Segment", "order_time", "orders"]
 
+SEAM_ROOM = 2.0  # packet widths of scan beyond the belief that a segment is for
 _DONE = 1e-3  # of the reachable belief may stay unscanned
 _THIN = 0.01  # density, over the densest in the window, below which a window's ends are cut
 _MOST_SEGMENTS = 40
@@ -112,12 +113,13 @@ def orders(
 
     Two families, each with long and short segments: from one end to the other, and always the
     segment with most belief for its time, travel included, which goes outward from where the
-    belief is thickest. A packet on the seam of two segments is seen whole in the second, since
-    each reaches one packet's width beyond the belief it is for. ``cells`` lie within the travel.
+    belief is thickest. Each segment reaches two packet widths beyond the belief that it is for, so
+    that a packet on the seam of two is seen, to one width on either side at least, by one of
+    them. ``cells`` lie within the travel.
     """
     low, high = sorted(facts.approach * end for end in facts.travel_m)
     longest = longest_scan(facts, way.speed_m_s or facts.speed_m_s)
-    margin = min(packet_fwhm_m, longest / 4.0)
+    margin = min(SEAM_ROOM * packet_fwhm_m, longest / 4.0)
     thick = _trimmed(cells)
     flat, support = thick.flat(), _support(thick)
     found: list[tuple[Segment, ...]] = []

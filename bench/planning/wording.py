@@ -31,7 +31,7 @@ def _reach(facts: BenchFacts, source: SourceFacts, way: Way) -> str:
 
 
 def why_search(
-    facts: BenchFacts, source: SourceFacts, way: Way, *, number: int, careful: bool, change_s: float
+    facts: BenchFacts, source: SourceFacts, way: Way, *, number: int, careful: bool, changed: bool
 ) -> str:
     if number > 0:
         return "The next most likely part, only if nothing was seen before."
@@ -43,7 +43,7 @@ def why_search(
     reason = _reach(facts, source, way)
     if way.undersampled:
         reason += ", and its known band makes sense of fewer than two to a fringe"
-    if change_s > 0.0:
+    if changed:
         reason += "; quickest even with the change of source"
     return reason[0].upper() + reason[1:] + "."
 
