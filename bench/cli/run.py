@@ -105,7 +105,7 @@ def perform(
         acknowledge=acknowledge,
         operator=operator,
         seed=seed,
-        pace=pace or ("fast" if unattended else "10"),
+        pace=pace if pace is not None else ("fast" if unattended else "10"),
     )
     watcher = Watcher(session, ask=not unattended)
     with signals_stop(session):
@@ -215,7 +215,7 @@ def _lines(document: dict[str, Any]) -> list[str]:
     lines += row("at wavelength", "at_wavelength", "nm")
     lines += row("stage left at", "stage_left_at", "mm")
     lines += row("residual OPD", "residual_opd", "nm")
-    lines += row("bench time", "bench_time", "s")
+    lines.append(f"  {'bench time':<22}{document['bench_time']['value']:.1f} s")
     truth = document.get("truth")
     if truth:
         lines += row("true zero", "zero", "mm", truth)

@@ -93,6 +93,10 @@ def _nearest(word: str, known: tuple[str, ...]) -> str:
     return found[0] if found else ""
 
 
+def _is_of(value: object, kind: type) -> bool:
+    return type(value) is kind  # a bool is no int here
+
+
 def _check(table: Mapping[str, Any], keys: Mapping[str, _Key], path: str) -> list[Problem]:
     problems = [
         Problem(
@@ -107,7 +111,7 @@ def _check(table: Mapping[str, Any], keys: Mapping[str, _Key], path: str) -> lis
                 problems.append(Problem(f"{path}{word}", "(missing)", key.what or _one_of(key)))
             continue
         value: Any = table[word]
-        if value.__class__ is not key.kind:
+        if not _is_of(value, key.kind):
             problems.append(Problem(f"{path}{word}", repr(value), key.what or _one_of(key)))
         elif key.allowed and value not in key.allowed:
             near = _nearest(value, key.allowed)
