@@ -6,6 +6,7 @@ import asyncio
 import sys
 import time
 from collections.abc import Awaitable, Callable
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -15,10 +16,11 @@ from textual.screen import ModalScreen
 from textual.widgets import Input
 
 sys.path.insert(0, str(Path(__file__).parent))
-from test_tui_fake import VIEWS, BrokenControl, FakeControl
+from test_tui_fake import CAUTION, VIEWS, BrokenControl, FakeControl
 from test_tui_screens import screen_text
 
 from bench.errors import UsageError
+from bench.procedure.live import LiveView
 from bench.tui.app import EvenarmApp
 from bench.tui.panels import QuestionPanel
 
@@ -311,10 +313,39 @@ def test_long_cautions_are_read_to_the_end_first() -> None:
     assert control.calls == [("answer", "q1", "Lin")]
 
 
+def test_each_question_is_read_anew() -> None:
+    class Twice(FakeControl):
+        second = False
+
+        def view(self) -> LiveView:
+            asked = replace(CAUTION, id="q9") if self.second else CAUTION
+            return replace(VIEWS["caution"], question=asked)
+
+        def answer(self, question_id: str, value: str | bool) -> None:
+            self._note("answer", question_id, value)
+            self.second = True
+
+    control = Twice("caution")
+
+    async def keys(pilot, app, ticks) -> None:
+        await see(pilot, "more below")
+        await press(pilot, "pagedown")
+        await read(pilot)
+        await press(pilot, *"Lin", "enter")
+        await look(pilot)
+        await see(pilot, "more below")
+        await press(pilot, *"Lin", "enter")
+        await see(pilot, "Read to the end first")
+
+    play(control, keys, size=(80, 24))
+    assert control.calls == [("answer", "q1", "Lin")]
+
+
 def test_a_key_hit_twice_answers_one_question() -> None:
     control = FakeControl("confirm")
 
     async def keys(pilot, app, ticks) -> None:
+        await read(pilot)
         await press(pilot, "y")
         assert control.calls == []  # too soon after the question came up
         ticks.now += 1.0

@@ -69,10 +69,8 @@ def run_app(control: RunControl) -> int:
         except Exception as error:  # noqa: BLE001 - told below, after the stage is at rest
             failure = error
         finally:
-            if control.started and not control.finished:
-                control.stop("the screen is gone")
             watch.end()
-            control.close(CLOSE_S)
+            control.close(CLOSE_S)  # stops first whatever still moves
     if isinstance(failure, EvenarmError):
         raise failure
     if wanted:
