@@ -3,21 +3,17 @@
 from __future__ import annotations
 
 import asyncio
-import sys
 import time
 from collections.abc import Awaitable, Callable
 from dataclasses import replace
-from pathlib import Path
 
 import pytest
+from test_tui_fake import CAUTION, VIEWS, BrokenControl, FakeControl
+from test_tui_screens import screen_text
 from textual.app import ComposeResult
 from textual.pilot import Pilot
 from textual.screen import ModalScreen
 from textual.widgets import Input
-
-sys.path.insert(0, str(Path(__file__).parent))
-from test_tui_fake import CAUTION, VIEWS, BrokenControl, FakeControl
-from test_tui_screens import screen_text
 
 from bench.errors import UsageError
 from bench.procedure.live import LiveView

@@ -3,14 +3,10 @@
 from __future__ import annotations
 
 import asyncio
-import sys
 import time
 from collections.abc import Iterable
-from pathlib import Path
 
 import pytest
-
-sys.path.insert(0, str(Path(__file__).parent))
 from test_tui_fake import VIEWS, FakeControl
 
 from bench.tui.app import EvenarmApp

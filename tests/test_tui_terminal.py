@@ -16,8 +16,6 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import pytest
-
-sys.path.insert(0, str(Path(__file__).parent))
 from test_tui_fake import FakeControl
 
 from bench.errors import UsageError

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import dataclasses
-import sys
-from pathlib import Path
 
 import numpy as np
 import pytest
@@ -12,8 +10,6 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from rich.cells import cell_len
 from rich.color import Color, ColorSystem
-
-sys.path.insert(0, str(Path(__file__).parent))
 from test_tui_fake import ASKED, BEFORE, FOUND, SCANNING, VIEWS, ZERO_M
 
 from bench.tui import figures, letters

@@ -143,6 +143,7 @@ class Board:
             half_width_m=1.96 * zero_u_m if zero_u_m is not None else belief.half_width_m,
             half_width_start_m=setup.prior.half_width_m,
             opd_per_m=setup.facts.opd_per_m,
+            accept_residual_opd_m=setup.accept.residual_opd_m,
             residual_opd_m=verdict.get("residual_opd_m"),
             residual_opd_standard_uncertainty_m=verdict.get("residual_u_m"),
             elapsed_s=max(0.0, self._now_s - state.began_s),

@@ -8,10 +8,10 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Callable, Mapping
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from bench.errors import EvenarmError, JournalError, MotionRefused
-from bench.journal import Journal, finite
+from bench.journal import finite
 from bench.quantities import StagePosition
 from bench.spec.model import BenchSpec
 from drivers.contracts import DeviceError, StageState
@@ -24,6 +24,9 @@ from .guard import Guard
 from .locating import findings, locate_readings
 from .scanning import Readings, ScanStopped, perform_step_scan, perform_sweep, wait_for_rest
 from .state import Event, Pending, RunState, Setup, evolve
+
+if TYPE_CHECKING:  # the class brings the database library, which the first screen need not wait for
+    from bench.journal import Journal
 
 __all__ = ["Conductor"]
 

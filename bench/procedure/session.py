@@ -9,11 +9,11 @@ import threading
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from datetime import datetime
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from bench import __version__
 from bench.errors import BenchFault, EvenarmError, UsageError, printable
-from bench.journal import Journal, open_journal
+from bench.journal import open_journal
 from bench.spec.model import BenchSpec
 
 from .board import Board
@@ -26,6 +26,9 @@ from .live import LiveView
 from .recovery import KINDS, LeftOpen, left_open
 from .state import RunState, Setup, SourceChange
 from .text import Procedure
+
+if TYPE_CHECKING:
+    from bench.journal import Journal
 
 __all__ = ["RunOptions", "RunSession"]
 
