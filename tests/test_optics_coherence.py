@@ -67,6 +67,27 @@ def test_rectangular_degree_of_coherence_has_its_zeros():
     np.testing.assert_allclose(np.abs(degree_of_coherence(spectrum, opd)), expected, atol=1e-9)
 
 
+def test_a_triangle_of_three_samples():
+    """The transform of a triangle of half width d is sinc^2(d opd): exact from three samples."""
+    spectrum = Spectrum(np.array([1.5e6, 1.7e6, 1.9e6]), np.array([0.0, 1.0, 0.0]))
+    opd = np.linspace(-40e-6, 40e-6, 161)
+    expected = np.sinc(0.2e6 * opd) ** 2 * np.exp(2j * math.pi * 1.7e6 * opd)
+    np.testing.assert_allclose(degree_of_coherence(spectrum, opd), expected, atol=1e-10)
+
+
+def test_a_ramp_of_two_samples():
+    """Power rising as 2 (s - a) / h^2 over a width h, by hand: 2 (e^(iz) (1 - iz) - 1) / z^2 with
+    z = 2 pi h opd, and the mean two thirds up."""
+    start, width = 1.5e6, 0.3e6
+    spectrum = Spectrum(np.array([start, start + width]), np.array([0.0, 1.0]))
+    opd = np.array([-9e-6, -1e-6, 0.4e-6, 3e-6, 17e-6])
+    z = 2.0 * math.pi * width * opd
+    expected = 2.0 * (np.exp(1j * z) * (1.0 - 1j * z) - 1.0) / z**2
+    expected = expected * np.exp(2j * math.pi * start * opd)
+    np.testing.assert_allclose(degree_of_coherence(spectrum, opd), expected, atol=1e-10)
+    assert spectrum.mean_wavenumber == pytest.approx(start + 2.0 * width / 3.0, rel=1e-12)
+
+
 def test_gaussian_by_parseval():
     """sigma 0.05/um about 1.25/um: 5.6419 um, and |g| one half at 3.7478 um of OPD.
 
