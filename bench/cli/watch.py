@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 import contextlib
+import shutil
 import signal
 import sys
+import textwrap
 import threading
 from collections.abc import Iterator
 from types import FrameType
 
 from bench.cli.output import note
 from bench.errors import BenchFault, UsageError, printable
+from bench.fringes.model import Located
 from bench.procedure.live import LiveView, Question
 from bench.procedure.session import RunSession
 from bench.procedure.state import RunState
@@ -65,13 +68,16 @@ class Watcher:
     def follow(self) -> None:
         """Until the run has ended."""
         self._thread.start()
-        said, asked = "", ""
+        said, asked, seen = "", "", None
         while not self._done.wait(LOOK_S):
             view = self._session.view()
             now = _line(view)
-            if now != said:
-                note(f"{view.elapsed_s:8.1f} s  {now}")
+            if now and now != said:
+                _note_wrapped(f"{view.elapsed_s:8.1f} s  ", now)
                 said = now
+            if view.located is not None and view.located is not seen:
+                seen = view.located
+                _note_wrapped(" " * 12, _found(seen))
             if view.question is not None and self._ask and view.question.id != asked:
                 asked = view.question.id
                 threading.Thread(target=self._put, args=(view.question,), daemon=True).start()
@@ -81,7 +87,7 @@ class Watcher:
         """Ask at the terminal, in a thread of its own: a stop need not wait for an answer."""
         note(f"\n{printable(question.title)}")
         for line in question.lines:
-            note(f"  - {printable(line, 400)}")
+            _note_wrapped("  - ", printable(line, 400))
         wants = "Your name: " if question.kind == "acknowledge" else "yes or no: "
         while not self._done.is_set():
             sys.stderr.write(wants)
@@ -105,6 +111,24 @@ class Watcher:
 
 
 def _line(view: LiveView) -> str:
+    """What goes on, empty where nothing worth a line does."""
+    if view.doing in {"nothing moves", "choosing what comes next"}:
+        return ""
     step = next((step.title for step in view.steps if step.state == "now"), "")
     place = f"{step}: " if step else ""
     return place + ("a question for you" if view.question else view.doing)
+
+
+def _found(located: Located) -> str:
+    from bench.quantities import show
+
+    if not located.found or located.zero is None:
+        return f"no packet there: {located.reason}"
+    zero = located.zero
+    return f"packet at {show(zero.value * 1e3, zero.standard_uncertainty * 1e3, 'mm')}"
+
+
+def _note_wrapped(lead: str, text: str) -> None:
+    width = max(40, shutil.get_terminal_size().columns)
+    indent = " " * len(lead)
+    note(textwrap.fill(text, width - 1, initial_indent=lead, subsequent_indent=indent))
