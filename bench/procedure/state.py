@@ -198,11 +198,21 @@ def _located(setup: Setup, state: RunState, body: Body) -> RunState:
         belief = belief.missed(leg.start_m, leg.stop_m, leg.detection_probability)
         return replace(state, belief=belief, missed=str(body.get("reason", "")))
     zero = ZeroFound(str(body["name"]), body["zero_m"], body["zero_u_m"], body["zero_time_s"])
-    # A coarse source's group zero may sit beside the fine one's where glass is unbalanced.
-    shift_m = setup.facts.glass_shift_m if leg.purpose == "search" else 0.0
+    shift_m = _glass_shift_m(setup.facts, leg) if leg.purpose == "search" else 0.0
     belief = belief.found(zero.zero_m, math.hypot(zero.u_m, shift_m))
     zeros = (*state.zeros, zero) if leg.purpose != "search" else state.zeros
     return replace(state, belief=belief, zeros=zeros, findings=body, missed="")
+
+
+def _glass_shift_m(facts: BenchFacts, leg: Leg) -> float:
+    """How far another source's group zero may sit from this one's where glass is unbalanced.
+
+    Sources of nearly the same mean wavelength (a thousandth) see the same glass.
+    """
+    mean_m = {source.name: source.mean_wavelength_m for source in facts.sources}
+    seen_m = mean_m[leg.source]
+    same = all(abs(other_m / seen_m - 1.0) <= 1e-3 for other_m in mean_m.values())
+    return 0.0 if same else facts.glass_shift_m
 
 
 def _judged(_setup: Setup, state: RunState, body: Body) -> RunState:
