@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
@@ -19,6 +20,8 @@ SLOW = "the signal wanders there without fringes of its own: no packet"
 LINE = "the fringes there are a line's, not the source's: no packet"
 FEW_PLACES = 10.0
 STRENGTH = 1e-4
+CUT_STRENGTH = 1e-2  # half a packet leaves few readings to compare with
+LONG_WINDOW = 200  # readings
 LONGEST = 3.5
 
 
@@ -57,7 +60,8 @@ def is_step(part: FloatArray, values: FloatArray, residual_energy: float) -> boo
     jumps -= smooth @ (smooth.T @ jumps)
     gain = (rest @ jumps) ** 2 / np.maximum(np.sum(jumps**2, axis=0), 1e-9)
     total = float(np.sum(rest**2))
-    return total - float(gain.max()) < max(1.3 * residual_energy, 0.3 * total)
+    left = total - float(gain.max())
+    return left < 0.3 * total or (left < 0.7 * total and left < 1.3 * residual_energy)
 
 
 def carried_by_few(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool:
@@ -70,6 +74,23 @@ def carried_by_few(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool
     again = fit_linear(part[keep], values[keep], fit.origin, fit.frequency, np.ones(keep.sum()))
     _, chance = strength(values[keep], again)
     return chance > 0.02
+
+
+def is_burst(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool:
+    """Whether the band's energy is no more than a stretch of strong noise brings with it.
+
+    The noise is taken from short stretches of the residuals, and what is noisy weighs little.
+    """
+    if part.size < LONG_WINDOW:
+        return False
+    size = part.size // 24
+    square = np.convolve(fit.residual**2, np.full(size, 1.0 / size), mode="same")
+    weight = 1.0 / np.maximum(square, 0.02 * float(np.mean(square)))
+    again = fit_linear(part, values, fit.origin, fit.frequency, weight)
+    root = np.sqrt(weight)
+    scaled = replace(again, residual=again.residual * root)
+    _, chance = strength((values - again.level) * root, scaled)
+    return chance > ACCEPT
 
 
 def ends_over_top(part: FloatArray, fit: LinearFit) -> tuple[float, float]:
@@ -121,7 +142,8 @@ def judge(
         return "too few readings on what may be a packet", candidate.false_alarm
     part, values = u[window.first : window.stop], flat[window.first : window.stop]
     fit = window.fit
-    if window.first == 0 or window.stop == u.size:
+    cut = window.first == 0 or window.stop == u.size
+    if cut:
         # a cut window holds fewer frequencies than the whole one that the fit is made for
         grid = band_grid(
             float(fit.frequency[0]), float(fit.frequency[-1]), float(part[-1] - part[0])
@@ -130,10 +152,11 @@ def judge(
     _, chance = strength(values, fit)
     stretch = candidate.width * (candidate.high - candidate.low) / ENVELOPE_FWHM
     few = candidate.places * (stretch if band_known else 1.0) < FEW_PLACES
-    if few or not band_known:
+    alone = few or not band_known
+    if alone:
         chance = min(1.0, chance * candidate.places)
-    false_alarm = max(chance, FLOOR_KNOWN if few else candidate.false_alarm)
-    if chance > (ACCEPT if few or not band_known else STRENGTH):
+    false_alarm = max(chance if alone else 0.0, FLOOR_KNOWN if few else candidate.false_alarm)
+    if chance > (ACCEPT if alone else CUT_STRENGTH if cut else STRENGTH):
         return NOTHING, false_alarm
     if candidate.false_alarm > ACCEPT and not few:
         return EVERYWHERE, candidate.false_alarm
@@ -145,6 +168,6 @@ def judge(
         return SLOW, 1.0
     if is_step(part, values, float(np.sum(fit.residual**2))):
         return STEP, 1.0
-    if carried_by_few(part, values, fit):
+    if carried_by_few(part, values, fit) or is_burst(part, values, fit):
         return NOTHING, 1.0
     return "", false_alarm
