@@ -119,6 +119,83 @@ def test_the_order_of_steps_is_checked(tmp_path, old, new, path):
         assert path in problems(tmp_path, text)
 
 
+def steps(*kinds):
+    """A procedure of these steps; scans are called one, two, ..., compare names the first two."""
+    names = iter(("one", "two", "three", "four"))
+    keys = {"move": 'to = "zero"', "compare": 'scans = ["one", "two"]', "confirm": 'text = ["t"]'}
+    text = 'name = "mine"\ntitle = "Mine"\n'
+    for kind in kinds:
+        more = f'name = "{next(names)}"' if kind == "scan" else keys.get(kind, "")
+        text += f'[[step]]\nkind = "{kind}"\ntitle = "{kind}"\n{more}\n'
+    return text
+
+
+TWICE = ("search", "scan", "scan")
+
+
+@pytest.mark.parametrize(
+    "kinds",
+    [
+        (*TWICE, "move", "compare"),
+        (*TWICE, "move", "record", "confirm", "compare", "record"),
+        ("search", "scan", "move", "scan", "move", "compare"),
+        (*TWICE, "move", "compare", "move", "compare"),
+        (*TWICE, "move", "compare", "scan", "move", "compare"),
+        (*TWICE, "move", "record"),
+        ("search", "record"),
+    ],
+)
+def test_a_verdict_about_the_place_where_the_stage_was_left(tmp_path, kinds):
+    assert load_procedure(write(tmp_path, steps(*kinds)), shipped=False).steps
+
+
+@pytest.mark.parametrize(
+    ("kinds", "path", "says"),
+    [
+        ((*TWICE, "compare"), "step 4.kind", "needs a move step before it"),
+        (("search", "scan", "move", "scan", "compare"), "step 5.kind", "no scan or search between"),
+        ((*TWICE, "move", "search", "compare"), "step 6.kind", "no scan or search between"),
+        ((*TWICE, "compare", "move"), "step 5.kind", "needs a compare step after it"),
+        ((*TWICE, "move", "compare", "move"), "step 6.kind", "step 5 judged"),
+        ((*TWICE, "move", "compare", "scan"), "step 6.kind", "needs a compare step after it"),
+        ((*TWICE, "move", "compare", "search"), "step 6.kind", "needs a compare step after it"),
+    ],
+)
+def test_a_verdict_about_another_place_is_refused(tmp_path, kinds, path, says):
+    assert says in problems(tmp_path, steps(*kinds))[path].allowed
+
+
+@pytest.mark.parametrize("named", ['["one", "one"]', '["one"]', '["one", "two", "one"]'])
+def test_a_scan_is_not_compared_with_itself(tmp_path, named):
+    text = steps(*TWICE, "move", "compare").replace('["one", "two"]', named)
+    assert "two different scans" in problems(tmp_path, text)["step 5.scans"].allowed
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "path"),
+    [
+        ('name = "mine"', 'name = ""', "name"),
+        ('title = "Mine"', 'title = ""', "title"),
+        ('title = "Mine"', 'title = "x"\nsummary = " "', "summary"),
+        ('title = "confirm"', 'title = " \\t"', "step 2.title"),
+        ('text = ["t"]', "text = []", "step 2.text"),
+        ('text = ["t"]', 'text = ["t", ""]', "step 2.text[1]"),
+        ('name = "one"', 'name = ""', "step 3.name"),
+        ('scans = ["one", "two"]', "scans = []", "step 6.scans"),
+    ],
+)
+def test_a_text_that_says_nothing_is_refused(tmp_path, old, new, path):
+    text = steps("search", "confirm", "scan", "scan", "move", "compare")
+    assert old in text
+    assert problems(tmp_path, text.replace(old, new))[path].allowed == "must not be empty"
+
+
+def test_there_is_an_end_to_the_steps(tmp_path):
+    most = ("search", *["record"] * 63)
+    assert len(load_procedure(write(tmp_path, steps(*most)), shipped=False).steps) == 64
+    assert problems(tmp_path, steps(*most, "record"))["step"].value == "65 steps"
+
+
 def test_going_back_needs_somewhere_to_go(tmp_path):
     text = GOOD.replace('kind = "search"', 'kind = "record"')
     text = text.replace('name = "one"', 'name = "one"\nif_missed = "search"')

@@ -9,6 +9,10 @@ A step is a table with a ``kind`` and a ``title``. Kinds and their other keys:
     move      to                      go to the "zero", approached from the right side
     compare   scans                   judge two scans and the residual OPD against [accept]
     record    -                       measurements into the journal
+
+A ``compare`` judges the place where the last ``move`` left the stage. So it needs a move before it
+with no scan or search between, and whatever moves the stage after the last compare is refused: the
+verdict would be about another place.
 """
 
 from __future__ import annotations
@@ -26,6 +30,7 @@ from bench.errors import InputError, Problem, SpecError
 __all__ = ["Procedure", "ProcedureStep", "find_procedure", "load_all", "load_procedure"]
 
 _LARGEST_FILE = 256 * 1024
+_MOST_STEPS = 64
 
 
 @dataclass(frozen=True)
@@ -76,6 +81,7 @@ _STEP_KEYS: dict[str, dict[str, _Key]] = {
     "compare": {"scans": _Key(list, required=True, what="the names of two scans")},
     "record": {},
 }
+_MOVING = {"search", "scan", "move"}
 _COMMON: dict[str, _Key] = {
     "kind": _Key(str, required=True, allowed=tuple(_STEP_KEYS)),
     "title": _Key(str, required=True, what="a short title"),
@@ -116,12 +122,25 @@ def _check(table: Mapping[str, Any], keys: Mapping[str, _Key], path: str) -> lis
         elif key.allowed and value not in key.allowed:
             near = _nearest(value, key.allowed)
             problems.append(Problem(f"{path}{word}", repr(value), _one_of(key), near))
-        elif key.kind is list and word != "step":
-            problems += [
-                Problem(f"{path}{word}[{i}]", repr(item), "must be a text")
-                for i, item in enumerate(value)
-                if not isinstance(item, str)
-            ]
+        elif word != "step":
+            problems += _check_texts(value, f"{path}{word}")
+    return problems
+
+
+def _check_texts(value: object, path: str) -> list[Problem]:
+    """Texts that say nothing: an operator would be shown an empty line, or asked nothing."""
+    if isinstance(value, str):
+        return [] if value.strip() else [Problem(path, repr(value), "must not be empty")]
+    if not isinstance(value, list):
+        return []
+    if not value:
+        return [Problem(path, "[]", "must not be empty")]
+    problems = []
+    for i, item in enumerate(value):
+        if isinstance(item, str):
+            problems += _check_texts(item, f"{path}[{i}]")
+        else:
+            problems.append(Problem(f"{path}[{i}]", repr(item), "must be a text"))
     return problems
 
 
@@ -145,9 +164,22 @@ def _check_order(steps: list[dict[str, Any]]) -> list[Problem]:
     problems: list[Problem] = []
     scans: list[str] = []
     searched = False
+    left_at_zero = False  # a move to the zero, and nothing since that moves the stage on
+    last_compare = max(
+        (n for n, step in enumerate(steps, 1) if step["kind"] == "compare"), default=0
+    )
     for number, step in enumerate(steps, 1):
         path = f"step {number}"
         kind = step["kind"]
+        if kind in _MOVING and 0 < last_compare < number:
+            problems.append(
+                Problem(
+                    f"{path}.kind",
+                    repr(kind),
+                    f"moves the stage away from what step {last_compare} judged; "
+                    "needs a compare step after it",
+                )
+            )
         if kind == "search":
             searched = True
         elif kind == "scan":
@@ -161,15 +193,31 @@ def _check_order(steps: list[dict[str, Any]]) -> list[Problem]:
         elif kind == "move" and not scans:
             problems.append(Problem(f"{path}.to", "'zero'", "needs a scan step before it"))
         elif kind == "compare":
-            if len(step["scans"]) != 2:
-                problems.append(Problem(f"{path}.scans", repr(step["scans"]), "must name two"))
-            problems += [
-                Problem(
-                    f"{path}.scans", repr(name), "is no earlier scan", _nearest(name, (*scans,))
+            if not left_at_zero:
+                problems.append(
+                    Problem(
+                        f"{path}.kind",
+                        "'compare'",
+                        "needs a move step before it, with no scan or search between: it judges "
+                        "the place where the stage was left",
+                    )
                 )
-                for name in step["scans"]
-                if name not in scans
-            ]
+            problems += _check_compared(step["scans"], scans, f"{path}.scans")
+        if kind in _MOVING:
+            left_at_zero = kind == "move"
+    return problems
+
+
+def _check_compared(named: list[str], scans: list[str], path: str) -> list[Problem]:
+    """Two different scans, both made before."""
+    problems = []
+    if len(named) != 2 or named[0] == named[1]:
+        problems.append(Problem(path, repr(named), "must name two different scans"))
+    problems += [
+        Problem(path, repr(name), "is no earlier scan", _nearest(name, (*scans,)))
+        for name in dict.fromkeys(named)
+        if name not in scans
+    ]
     return problems
 
 
@@ -205,6 +253,8 @@ def load_procedure(path: Path, *, shipped: bool) -> Procedure:
             problems += _check_step(step, f"step {number}")
         if not steps:
             problems.append(Problem("step", "[]", "one [[step]] table or more"))
+        if len(steps) > _MOST_STEPS:
+            problems.append(Problem("step", f"{len(steps)} steps", f"at most {_MOST_STEPS}"))
         if not problems:
             problems += _check_order(steps)
     if not problems and table["name"] != path.stem:
