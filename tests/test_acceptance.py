@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 
 import pytest
@@ -88,3 +89,81 @@ def test_nothing_is_accepted_beyond_its_limits(a, b, ua, ub, left):
     if found.accepted:
         assert abs(found.residual_opd_m) + 2.0 * found.residual_u_m <= 200e-9
         assert 2.0 * abs(a - b) <= 100.0 + 1e-6
+
+
+@pytest.mark.parametrize("u_nm", [0.0, -5.0, -0.0, math.nan, math.inf])
+def test_an_uncertainty_that_cannot_be_is_refused(u_nm):
+    good, bad = zero("a", 0.0), zero("b", 0.0, u_nm)
+    for pair in ((good, bad), (bad, good)):
+        with pytest.raises(ValueError, match="'b'"):
+            combine(*pair)
+        with pytest.raises(ValueError, match="'b'"):
+            verdict(*pair, left_nm=0.0)
+
+
+def judged(**changed):
+    """The verdict of a run that would be accepted, with some of its numbers changed."""
+    given = {
+        "accept": ACCEPT, "opd_per_m": 2.0, "resolution_m": 20e-9, "first": zero("a", 0.0),
+        "second": zero("b", 0.0, time_s=10.0), "left_at_m": 12e-3, "left_at_s": 20.0,
+    }  # fmt: skip
+    given |= changed
+    return judge(given.pop("accept"), **given)
+
+
+def test_a_limit_that_is_not_a_number_rejects():
+    assert judged().accepted
+    for key in ("residual_opd_m", "scans_agree_m"):
+        assert not judged(accept=dataclasses.replace(ACCEPT, **{key: math.nan})).accepted
+
+
+spoilt = st.sampled_from([math.nan, math.inf, -math.inf])
+
+
+@given(
+    whose=st.sampled_from(["zero_m", "u_m", "time_s", "opd_per_m", "resolution_m", "left_at_m",
+                           "left_at_s", "coverage_factor"]),
+    which=st.sampled_from(["first", "second"]),
+    value=spoilt,
+)  # fmt: skip
+def test_what_is_not_a_finite_number_is_never_accepted(whose, which, value):
+    scan = zero(which, 0.0, time_s=5.0)
+    if whose == "coverage_factor":
+        changed = {"accept": dataclasses.replace(ACCEPT, coverage_factor=value)}
+    elif hasattr(scan, whose):
+        changed = {which: dataclasses.replace(scan, **{whose: value})}
+    else:
+        changed = {whose: value}
+    with pytest.raises(ValueError, match="not a finite number"):
+        judged(**changed)
+
+
+@pytest.mark.parametrize(
+    "changed",
+    [
+        {"opd_per_m": 0.0},
+        {"resolution_m": -20e-9},
+        {"accept": dataclasses.replace(ACCEPT, coverage_factor=-2.0)},
+        {"accept": dataclasses.replace(ACCEPT, coverage_factor=0.0)},
+    ],
+)
+def test_a_bench_that_cannot_be_is_refused(changed):
+    with pytest.raises(ValueError, match="nothing can be judged"):
+        judged(**changed)
+
+
+any_number = st.floats(allow_nan=True, allow_infinity=True)
+
+
+@given(za=any_number, ua=any_number, zb=any_number, ub=any_number, left=any_number)
+def test_whatever_the_numbers_only_finite_bounds_are_accepted(za, ua, zb, ub, left):
+    try:
+        found = judged(
+            first=ZeroFound("a", za, ua, 0.0), second=ZeroFound("b", zb, ub, 10.0), left_at_m=left
+        )
+    except ValueError:
+        return
+    assert ua > 0.0 < ub
+    if found.accepted:
+        assert abs(found.residual_opd_m) + 2.0 * found.residual_u_m <= 200e-9
+        assert found.residual_u_m > 0.0

@@ -39,17 +39,33 @@ def combine(first: ZeroFound, second: ZeroFound) -> ZeroFound:
 
     Where they differ by more than their uncertainties explain, the uncertainty is widened by the
     square root of the reduced chi-square (Birge's ratio; common practice in adjusting constants).
+    Raises ValueError for a value that is not finite or an uncertainty that is not positive.
     """
-    w1, w2 = 1.0 / first.u_m**2, 1.0 / second.u_m**2
-    total = w1 + w2
-    zero_m = (w1 * first.zero_m + w2 * second.zero_m) / total
-    chi2 = (first.zero_m - second.zero_m) ** 2 / (first.u_m**2 + second.u_m**2)
+    for found in (first, second):
+        _refuse_not_finite(f"the scan {found.scan!r}", found.zero_m, found.u_m, found.time_s)
+        if not found.u_m > 0.0:
+            raise ValueError(f"the scan {found.scan!r}: uncertainty {found.u_m} m is not positive")
+    # Written with ratios, because squares of the uncertainties can overflow or vanish.
+    apart_u_m = math.hypot(first.u_m, second.u_m)
+    share_1, share_2 = (second.u_m / apart_u_m) ** 2, (first.u_m / apart_u_m) ** 2
+    birge = max(1.0, abs(first.zero_m - second.zero_m) / apart_u_m)
+    zero_m = share_1 * first.zero_m + share_2 * second.zero_m
+    u_m = first.u_m * (second.u_m / apart_u_m) * birge
+    _refuse_not_finite(f"the scans {first.scan!r} and {second.scan!r} together", zero_m, u_m)
+    if not u_m > 0.0:
+        raise ValueError(f"the scans {first.scan!r} and {second.scan!r}: no uncertainty is left")
     return ZeroFound(
         scan=f"{first.scan}, {second.scan}",
         zero_m=zero_m,
-        u_m=math.sqrt(max(1.0, chi2) / total),
-        time_s=(w1 * first.time_s + w2 * second.time_s) / total,
+        u_m=u_m,
+        time_s=share_1 * first.time_s + share_2 * second.time_s,
     )
+
+
+def _refuse_not_finite(whose: str, *values: float) -> None:
+    for value in values:
+        if not math.isfinite(value):
+            raise ValueError(f"{whose}: {value} is not a finite number")
 
 
 def judge(
@@ -66,8 +82,16 @@ def judge(
 
     The uncertainty of the residual OPD holds that of the zero, the resolution of the read-back
     (rectangular, GUM 4.3.7) and what the zero may have drifted since, judged from how far apart the
-    two scans saw it.
+    two scans saw it. Raises ValueError for a value that is not finite, or an uncertainty, a
+    coverage factor or a path factor that cannot be: none of them may end as an acceptance.
     """
+    _refuse_not_finite("the place where the stage was left", left_at_m, left_at_s)
+    _refuse_not_finite("the bench", opd_per_m, resolution_m, accept.coverage_factor)
+    if not (abs(opd_per_m) > 0.0 and resolution_m >= 0.0 and accept.coverage_factor > 0.0):
+        raise ValueError(
+            f"{opd_per_m} of OPD for a unit of reading, resolution {resolution_m} m, coverage "
+            f"factor {accept.coverage_factor}: nothing can be judged with these"
+        )
     zero = combine(first, second)
     scale = abs(opd_per_m)
     residual_m = opd_per_m * (left_at_m - zero.zero_m)
@@ -76,17 +100,16 @@ def judge(
     # An honest ceiling: the two zeros scatter by their own uncertainty even when nothing drifts.
     drift_rate = differ_m / apart_s if apart_s > 0 else 0.0
     drift_u_m = drift_rate * abs(left_at_s - zero.time_s) / math.sqrt(3.0)
-    residual_u_m = math.sqrt(
-        (scale * zero.u_m) ** 2 + (scale * resolution_m / math.sqrt(12.0)) ** 2 + drift_u_m**2
-    )
+    residual_u_m = math.hypot(scale * zero.u_m, scale * resolution_m / math.sqrt(12.0), drift_u_m)
     bound_m = abs(residual_m) + accept.coverage_factor * residual_u_m
     reasons = []
-    if differ_m > accept.scans_agree_m:
+    # Written so that a limit or a bound that is not a number rejects.
+    if not differ_m <= accept.scans_agree_m:
         reasons.append(
             f"the two scans differ by {differ_m * 1e9:.1f} nm of OPD, "
             f"more than {accept.scans_agree_m * 1e9:g} nm"
         )
-    if bound_m > accept.residual_opd_m:
+    if not bound_m <= accept.residual_opd_m:
         reasons.append(
             f"residual OPD {residual_m * 1e9:.1f} nm with {accept.coverage_factor:g} x "
             f"{residual_u_m * 1e9:.1f} nm is not within {accept.residual_opd_m * 1e9:g} nm"
