@@ -20,6 +20,7 @@ from bench.planning.kinematics import (
     readings_of,
     scan_ends,
     scan_time,
+    step_time,
     stroke_time,
 )
 from bench.planning.model import BenchFacts, Leg, SourceFacts
@@ -117,6 +118,16 @@ def test_scan_times():
     assert readings_of(FACTS, 1e-3, 1.01e-3, 1e-4, None) == 100
     with pytest.raises(ValueError, match="speed or an increment"):
         scan_time(FACTS, 0.0, 1e-3, None, None)
+
+
+@pytest.mark.parametrize(
+    ("settle_s", "lag_s", "wait_s"),
+    [(0.05, 0.0, 0.05), (0.05, 0.3, 0.3), (0.0, 0.3, 0.3), (0.05, -0.3, 0.05)],
+)
+def test_a_step_waits_for_the_detector_as_well(settle_s, lag_s, wait_s):
+    facts = replace(FACTS, settle_s=settle_s, lag_s=lag_s)
+    by_hand = 2 * math.sqrt(1e-6 / 0.01) + wait_s + 1e-3
+    assert step_time(facts, 1e-6) == pytest.approx(by_hand)
 
 
 def test_leg_time_counts_the_way_there():

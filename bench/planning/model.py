@@ -33,7 +33,8 @@ class BenchFacts:
 
     ``opd_per_m`` is the signed OPD for one unit of stage reading, air included. ``approach`` is +1
     (increasing) or -1. ``glass_shift_m`` is the standard uncertainty, in stage reading, of the
-    shift of the group zero between two sources that unknown residual glass allows.
+    shift of the group zero between two sources that unknown residual glass allows. ``lag_s`` is the
+    delay between a position and the reading that belongs to it.
     """
 
     opd_per_m: float
@@ -51,6 +52,7 @@ class BenchFacts:
     accept_residual_opd_m: float
     glass_shift_m: float
     sources: tuple[SourceFacts, ...]
+    lag_s: float = 0.0
 
 
 @dataclass(frozen=True)

@@ -74,6 +74,7 @@ def bench_facts(spec: BenchSpec) -> BenchFacts:
         accept_residual_opd_m=spec.accept.residual_opd_m,
         glass_shift_m=_glass_shift_m(spec, usable),
         sources=tuple(_source_facts(source) for source in usable),
+        lag_s=detector.lag_s,
     )
 
 
