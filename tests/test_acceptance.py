@@ -45,6 +45,11 @@ def test_zeros_that_disagree_widen_the_uncertainty():
     assert both.u_m == pytest.approx(10.0 * 5e-9 / math.sqrt(2.0))
 
 
+def test_what_all_scans_share_is_not_averaged_away():
+    a, b = (ZeroFound(name, 12e-3, math.hypot(3e-9, 4e-9), 0.0, common_u_m=4e-9) for name in "ab")
+    assert combine(a, b).u_m == pytest.approx(math.hypot(3e-9 / math.sqrt(2.0), 4e-9))
+
+
 def test_the_budget_of_the_residual_opd():
     """Terms worked by hand: zero 5/sqrt2 nm, read-back 20/sqrt12 nm (GUM 4.3.7), twice in OPD."""
     found = verdict(zero("a", 0.0), zero("b", 0.0, time_s=10.0), left_nm=10.0)

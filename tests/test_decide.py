@@ -97,9 +97,14 @@ class World:
             case "move":
                 return said.MoveEnded(body["target_m"], self.time_s)
             case "scan":
-                return said.ScanEnded(body["end_m"], 1000, self.time_s, self.time_s)
+                return said.ScanEnded(
+                    body["end_m"], self.read(body), 1000, self.time_s, self.time_s
+                )
             case _:
                 return self.located(body["name"])
+
+    def read(self, body) -> tuple[float, float]:
+        return tuple(sorted((body["start_m"], body["stop_m"])))
 
     def located(self, name: str) -> said.Input:
         leg = self.state.leg
@@ -236,6 +241,7 @@ def test_an_unknown_position_is_asked_about_before_anything_moves():
     for interrupted, known in (("Run r0 began to move the stage.", True), ("", False)):
         world = World(setup())
         world.begin(interrupted, known=known and not interrupted)
+        world.feed(world.answer())
         assert world.state.pending.kind == "question"
         assert "not known" in world.state.pending.body["title"]
         world.feed(world.answer())
@@ -248,15 +254,79 @@ def test_an_unknown_position_is_asked_about_before_anything_moves():
 def test_no_to_a_question_ends_the_run_with_nothing_moved():
     world = World(setup())
     world.begin("Run r0 began to move the stage.", known=False)
+    world.feed(world.answer())
     world.feed(said.Answered(False, "Kim", 1.0))
     assert world.run().outcome == "stopped"
     assert not [kind for kind in world.kinds() if kind.endswith("-intended")]
 
 
+def test_a_stop_that_nothing_confirms_is_a_fault_and_says_what_to_do():
+    world = World(setup())
+    world.begin()
+    world.feed(said.StopAsked("Kim", "key", 2.0))
+    world.feed(said.Stopped(None, False, False, "key", 12.0))
+    assert world.state.outcome == "fault"
+    assert "power switch" in world.state.reason
+    assert not world.state.at_rest
+
+
+def test_an_unconfirmed_rest_after_a_failure_is_said():
+    for at_rest in (True, False):
+        world = World(setup())
+        world.begin()
+        world.feed(said.Failed("silence", "stage", "look", None, False, at_rest, 2.0))
+        assert ("power switch" in world.state.reason) is not at_rest
+        assert world.state.at_rest is at_rest
+
+
+def test_a_source_changed_by_hand_is_given_its_time_to_warm_up():
+    world = World(setup(source_change="hand"))
+    world.begin()
+    world.run()
+    kinds = world.kinds()
+    for place, event in enumerate(world.events):
+        if event.kind == "question-answered" and event.body["id"].startswith("source"):
+            assert kinds[place + 1 : place + 3] == ["source-intended", "source-selected"]
+    ids = [e.body["id"] for e in world.events if e.kind == "question-asked"]
+    assert len(ids) == len(set(ids))
+
+
+def test_the_zero_is_approached_from_at_least_as_far_as_the_scans_were():
+    """Play larger than the allowance is taken up in the same way by scans and approach."""
+    world = World(setup(facts=dataclasses.replace(FACTS, reversal_allowance_m=4e-6)))
+    world.begin()
+    assert world.run().outcome == "accepted"
+    done = [e.body for e in world.events if e.kind == "move-done"]
+    newest = [body for body in done if body["role"] == "overshoot"][-1]
+    approach = next(body for body in done if body["role"] == "approach")
+    assert approach["position_m"] <= newest["position_m"]
+    assert world.zero_m - approach["position_m"] > 8e-6
+
+
+def test_a_zero_that_cannot_be_approached_from_its_side_is_rejected():
+    facts = dataclasses.replace(FACTS, travel_m=(13.19e-3, 25e-3))
+    world = World(setup(facts=facts, prior=Belief.uniform(14e-3, 1e-3)))
+    world.begin()
+    state = world.run()
+    assert state.outcome == "rejected"
+    assert "near the end of the travel" in state.reason
+    assert state.left_at_m is None
+
+
+def test_what_was_not_read_is_not_believed_to_be_empty():
+    world = World(setup(), zero_m=20e-3)
+    world.read = lambda body: (body["start_m"], body["start_m"] + 1e-7)
+    world.begin()
+    while world.state.legs_run < 3:
+        world.feed(world.answer())
+    low, high = world.state.belief.interval(0.95)
+    assert high - low > 9e-3
+
+
 def test_a_stop_does_not_make_an_unknown_position_known():
     for happened in (
-        said.Stopped(5e-3, True, "key", 2.0),
-        said.Failed("silence", "stage", "look", 5e-3, True, 2.0),
+        said.Stopped(5e-3, True, True, "key", 2.0),
+        said.Failed("silence", "stage", "look", 5e-3, True, True, 2.0),
     ):
         world = World(setup())
         world.begin("Run r0 began to move the stage.", known=False)
@@ -297,13 +367,13 @@ EVERY_INPUT: tuple[said.Input, ...] = (
     said.SourceReady(9.0),
     said.HomeEnded(0.0, 9.0),
     said.MoveEnded(1e-3, 9.0),
-    said.ScanEnded(1e-3, 10, 9.0, 9.0),
+    said.ScanEnded(1e-3, (1e-3, 2e-3), 10, 9.0, 9.0),
     said.LocateEnded({"found": False, "reason": "none"}, 9.0),
-    said.Failed("silence", "detector", "look at it", 1e-3, True, 9.0),
-    said.Failed("silence", "stage", "look at it", None, False, 9.0),
+    said.Failed("silence", "detector", "look at it", 1e-3, True, True, 9.0),
+    said.Failed("silence", "stage", "look at it", None, False, True, 9.0),
     said.StopAsked("Kim", "key", 9.0),
-    said.Stopped(1e-3, True, "key", 9.0),
-    said.Stopped(None, False, "key", 9.0),
+    said.Stopped(1e-3, True, True, "key", 9.0),
+    said.Stopped(None, False, False, "key", 9.0),
 )
 
 
@@ -349,7 +419,8 @@ def test_every_input_in_every_state_has_a_defined_outcome(made):
         if state.phase == "ended":
             assert events == ()
         elif isinstance(happened, said.Stopped):
-            assert (after.outcome, after.pending) == ("stopped", None)
+            assert after.outcome == ("stopped" if happened.at_rest else "fault")
+            assert after.pending is None
         elif isinstance(happened, said.Failed):
             assert (after.outcome, after.pending) == ("fault", None)
         elif isinstance(happened, said.StopAsked):
@@ -366,7 +437,7 @@ def test_a_stop_that_is_told_twice_ends_once():
     for _ in range(12):
         world.feed(world.answer())
     world.feed(said.StopAsked("Kim", "key", 50.0))
-    world.feed(said.Stopped(3e-3, True, "key", 51.0))
-    assert world.feed(said.Stopped(3e-3, True, "key", 52.0)) == ()
+    world.feed(said.Stopped(3e-3, True, True, "key", 51.0))
+    assert world.feed(said.Stopped(3e-3, True, True, "key", 52.0)) == ()
     assert world.kinds().count("run-ended") == 1
     assert world.events[-1].body["outcome"] == "stopped"

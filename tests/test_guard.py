@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
+import threading
 
 import pytest
 from hypothesis import given, settings
@@ -14,7 +15,7 @@ from bench.procedure.guard import Guard, refusal
 from bench.procedure.ports import Port
 from bench.quantities import Opd, StageDisplacement, StagePosition
 from bench.spec.model import StageSpec
-from drivers.contracts import DeviceError, Identity, NoReply, StageState
+from drivers.contracts import DeviceError, GarbledReply, Identity, NoReply, StageState
 
 SPEC = StageSpec(
     driver="fake",
@@ -192,6 +193,59 @@ def test_a_lapsed_lease_stops_the_axis(bench):
     assert bench.stage.stops == before + 1
     with pytest.raises(MotionRefused, match="motion was stopped"):
         bench.guard.start_move(StagePosition(12.1e-3), 1e-3)
+
+
+def test_a_stop_that_was_not_answered_stays_owed(bench):
+    bench.guard.arm()
+    bench.guard.start_move(StagePosition(12e-3), 1e-3)
+    bench.wall_s = 10.0
+    stop, bench.stage.stop = bench.stage.stop, garbled
+    for _ in range(3):
+        with pytest.raises(DeviceError):
+            bench.guard.check_lease()
+    bench.stage.stop = stop
+    before = bench.stage.stops
+    assert bench.guard.check_lease()
+    assert bench.stage.stops == before + 1
+    assert not bench.guard.check_lease()
+
+
+def test_a_driver_that_breaks_in_its_own_way_is_a_device_error(bench):
+    bench.guard.arm()
+    bench.guard.start_move(StagePosition(12e-3), 1e-3)
+    bench.wall_s = 10.0
+    bench.stage.stop = broken
+    with pytest.raises(DeviceError, match="OSError"):
+        bench.guard.check_lease()
+
+
+def test_a_move_that_overruns_its_deadline_is_stopped_when_it_begins_at_last(bench, monkeypatch):
+    bench.guard.arm()
+    bench.port.grace_s = 0.01
+    go_on, begin = threading.Event(), bench.stage.start_move
+
+    def late(target_m: float, speed_m_s: float, *, timeout_s: float) -> None:
+        assert go_on.wait(10)
+        begin(target_m, speed_m_s, timeout_s=timeout_s)
+
+    bench.stage.start_move = late
+    before = bench.stage.stops
+    monkeypatch.setattr("bench.procedure.guard.CALL_TIMEOUT_S", 0.01)
+    with pytest.raises(NoReply):
+        bench.guard.start_move(StagePosition(12e-3), 1e-3)
+    monkeypatch.undo()
+    go_on.set()
+    bench.port.grace_s = 5.0
+    assert bench.guard.state().position_m == 12e-3  # it did begin ...
+    assert bench.stage.stops == before + 1  # ... and the stop came right behind it
+
+
+def garbled(*, timeout_s: float) -> None:
+    raise GarbledReply("noise on the line", device="stage")
+
+
+def broken(*, timeout_s: float) -> None:
+    raise OSError("the port went away")
 
 
 def test_a_stage_at_rest_needs_no_lease(bench):

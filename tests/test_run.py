@@ -50,13 +50,12 @@ def session(folder: Path, seed: int, **options: object) -> RunSession:
 def test_the_zero_is_found_and_the_stage_left_there(tmp_path, seed):
     run = session(bench_folder(tmp_path), seed)
     state = run.run()
-    truth = run.reveal()
     assert state.outcome == "accepted", state.reason
     assert state.verdict is not None
-    true_zero_m = truth.group_zero_m(600e-9, time_s=state.left_at_s)
-    off_m = state.verdict["zero_m"] - true_zero_m
+    assert run.truth is not None
+    off_m = state.verdict["zero_m"] - run.truth.zero_m
     assert abs(off_m) < 5.0 * state.verdict["zero_u_m"]
-    true_residual_m = run.setup.facts.opd_per_m * (state.left_at_m - true_zero_m)
+    true_residual_m = run.truth.residual_opd_m
     assert abs(true_residual_m) < 200e-9
     claimed_m, u_m = state.verdict["residual_opd_m"], state.verdict["residual_u_m"]
     assert abs(true_residual_m - claimed_m) < 5.0 * u_m

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import math
 import sys
@@ -35,9 +36,13 @@ def emit_json(document: Mapping[str, Any]) -> None:
 
 
 def note(text: str) -> None:
-    """Progress and warnings: standard error, so that standard output stays clean."""
-    sys.stderr.write(text + "\n")
-    sys.stderr.flush()
+    """Progress and warnings: standard error, so that standard output stays clean.
+
+    A standard error that nobody reads any more is no reason to end anything.
+    """
+    with contextlib.suppress(OSError, ValueError):
+        sys.stderr.write(text + "\n")
+        sys.stderr.flush()
 
 
 def quantity(value: float, unit: str, uncertainty: float | None = None) -> dict[str, Any]:

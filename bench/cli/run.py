@@ -13,6 +13,7 @@ from bench.cli.output import (
     EXIT_NEGATIVE,
     EXIT_STOPPED,
     emit_json,
+    quantity,
     report_error,
 )
 from bench.errors import EvenarmError, UsageError
@@ -109,7 +110,10 @@ def perform(
     )
     watcher = Watcher(session, ask=not unattended)
     with signals_stop(session):
-        watcher.follow()
+        try:
+            watcher.follow()
+        finally:
+            watcher.end()
     if session.error is not None:
         raise session.error
     state = watcher.state()
@@ -139,6 +143,9 @@ def new_session(
     from bench.procedure.text import find_procedure
 
     paced = parse_pace(pace)
+    for option, name in (("--acknowledge", acknowledge), ("--operator", operator)):
+        if name is not None and not printable(name).strip():
+            raise UsageError("a name is needed", where=option, mend="give the name of a person")
     spec = open_bench(bench, seed=seed)
     found = find_procedure(procedure, spec.folder)
     if operator is None:
@@ -153,7 +160,7 @@ def new_session(
         RunOptions(
             operator=printable(operator, 80).strip() or "unknown",
             unattended=unattended,
-            acknowledged_by=printable(acknowledge, 80).strip() if acknowledge else None,
+            acknowledged_by=printable(acknowledge, 80).strip() if acknowledge is not None else None,
             pace=paced,
         ),
         now=lambda: datetime.now(UTC),
@@ -175,26 +182,15 @@ def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool
         "reason": state.reason,
     }
     if reveal:
-        document["truth"] = _truth(session, state)
+        truth = session.truth
+        document["truth"] = truth and {
+            "zero": quantity(truth.zero_m * 1e6, "um"),
+            "residual_opd": quantity(truth.residual_opd_m * 1e9, "nm"),
+        }
     if as_json:
         emit_json(document)
         return
     typer.echo("\n".join(_lines(document)))
-
-
-def _truth(session: RunSession, state: RunState) -> dict[str, Any] | None:
-    """What a simulated bench hid: the group zero, and the OPD where the stage was left."""
-    truth = session.reveal()
-    at_m = session.setup.at_wavelength_m
-    if truth is None or at_m is None:
-        return None
-    time_s = state.left_at_s if state.left_at_s is not None else state.time_s
-    zero_m = truth.group_zero_m(at_m, time_s=time_s)
-    document: dict[str, Any] = {"zero": {"value": zero_m * 1e6, "unit": "um"}}
-    if state.left_at_m is not None:
-        opd_m = session.setup.facts.opd_per_m * (state.left_at_m - zero_m)
-        document["residual_opd"] = {"value": opd_m * 1e9, "unit": "nm"}
-    return document
 
 
 def _lines(document: dict[str, Any]) -> list[str]:

@@ -21,6 +21,7 @@ from bench.procedure.state import RunState
 __all__ = ["Watcher", "signals_stop"]
 
 LOOK_S = 0.05
+STOP_S = 30.0
 
 
 @contextlib.contextmanager
@@ -83,16 +84,27 @@ class Watcher:
                 threading.Thread(target=self._put, args=(view.question,), daemon=True).start()
         self._thread.join()
 
+    def end(self) -> None:
+        """Whatever ended the watching, nothing is left moving behind it. Idempotent."""
+        if not self._done.is_set():
+            self._session.stop("nobody watches the run any more")
+            self._thread.join(timeout=STOP_S)
+
     def _put(self, question: Question) -> None:
         """Ask at the terminal, in a thread of its own: a stop need not wait for an answer."""
         note(f"\n{printable(question.title)}")
         for line in question.lines:
             _note_wrapped("  - ", printable(line, 400))
+        _forget_what_was_typed()
         wants = "Your name: " if question.kind == "acknowledge" else "yes or no: "
         while not self._done.is_set():
-            sys.stderr.write(wants)
-            sys.stderr.flush()
-            text = sys.stdin.readline()
+            with contextlib.suppress(OSError):
+                sys.stderr.write(wants)
+                sys.stderr.flush()
+            try:
+                text = sys.stdin.readline()
+            except OSError:
+                text = ""
             if not text:
                 self._session.stop("the terminal was closed")
                 return
@@ -108,6 +120,14 @@ class Watcher:
                 note(error.what)
                 continue
             return
+
+
+def _forget_what_was_typed() -> None:
+    """Keys that were hit before the question was there are no answers to it."""
+    with contextlib.suppress(ImportError, OSError, ValueError):
+        import termios
+
+        termios.tcflush(sys.stdin, termios.TCIFLUSH)
 
 
 def _line(view: LiveView) -> str:

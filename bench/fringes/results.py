@@ -19,6 +19,9 @@ from bench.fringes.model import (
 )
 from bench.fringes.zero import PacketFit
 
+SPEED_OF_LIGHT_M_S = 299_792_458.0
+GUESSED = 0.3  # of the higher orders of a glass that nobody named, by how much glasses differ
+
 
 @dataclass(frozen=True)
 class Solution:
@@ -63,7 +66,38 @@ def group_zero(solution: Solution, *, stated: bool) -> Estimate:
         second = float(ends[0] + ends[2]) / step**2
         k = fit.frequency.size
         gradient[FIRST : FIRST + k] = -fit.bend * second / (2.0 * np.pi) * of_mean
-    return Estimate(fit.shift, solution.spread_of(gradient))
+    return Estimate(
+        fit.shift, math.hypot(solution.spread_of(gradient), GUESSED * _beyond_second_order(fit))
+    )
+
+
+def _beyond_second_order(fit: PacketFit) -> float:
+    """What the assumed glass' higher orders move the group zero by, 0 where none is assumed."""
+    if fit.dispersion.beyond is None:
+        return 0.0
+    away = fit.frequency - fit.reference
+    size = np.abs(fit.amplitude)
+    columns = np.stack([np.ones_like(away), away, away**2], axis=1) * size[:, None]
+    scale = np.maximum(np.sqrt(np.sum(columns**2, axis=0)), 1e-300)
+    phase = fit.dispersion.beyond(fit.frequency) * size
+    solved, *_ = np.linalg.lstsq(columns / scale, phase, rcond=1e-9)
+    return abs(fit.bend * float(solved[1] / scale[1])) / (2.0 * math.pi)
+
+
+def scale_share(
+    glass: ResidualGlass | None, at_wavelength_m: float, relative: float, opd_per_x: float
+) -> float:
+    """What an axis that is wrong by ``relative`` moves the group zero, in units of x (>= 0).
+
+    Such an axis takes one wavelength for another, and with unbalanced glass the group zero depends
+    on the wavelength: in OPD by c omega D per relative change, D the group delay dispersion (from
+    tau = tau0 + D (omega - omega0)).
+    """
+    if glass is None or glass.dispersion_fs2 is None or relative == 0.0:
+        return 0.0
+    per_second = 2.0 * math.pi * SPEED_OF_LIGHT_M_S / at_wavelength_m
+    dispersion_s2 = abs(glass.dispersion_fs2.value) * 1e-30
+    return abs(SPEED_OF_LIGHT_M_S * per_second * dispersion_s2 * relative / opd_per_x)
 
 
 def fringe_zero(solution: Solution, zero: Estimate) -> FringeZero | None:

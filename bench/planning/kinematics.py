@@ -108,11 +108,11 @@ def scan_ends_at(
 def step_time(facts: BenchFacts, increment_m: float) -> float:
     """Time of one step: move, settle, read.
 
-    The wait is at least the detector's lag, because a reading before that still shows the place
-    where the stage was. A negative lag shortens nothing.
+    The detector's lag comes on top of the settling, because what it shows until then is the stage
+    settling. A negative lag shortens nothing.
     """
     move = stroke_time(increment_m, facts.speed_m_s, facts.acceleration_m_s2)
-    wait = max(facts.settle_s, facts.lag_s)
+    wait = facts.settle_s + max(facts.lag_s, 0.0)
     return move + wait + max(1.0 / facts.rate_hz, facts.integration_s)
 
 

@@ -12,12 +12,25 @@ __all__ = ["Verdict", "ZeroFound", "combine", "judge"]
 
 @dataclass(frozen=True)
 class ZeroFound:
-    """A zero as one scan saw it: stage reading and its standard uncertainty, at a bench time."""
+    """A zero as one scan saw it: stage reading and its standard uncertainty, at a bench time.
+
+    ``common_u_m`` is the part of ``u_m`` that every scan of this bench shares, such as that of the
+    axis' scale: no number of scans makes it smaller.
+    """
 
     scan: str
     zero_m: float
     u_m: float
     time_s: float
+    common_u_m: float = 0.0
+
+    @property
+    def own_u_m(self) -> float:
+        """The part that is this scan's own; never quite nothing."""
+        own = math.sqrt(max(self.u_m - self.common_u_m, 0.0)) * math.sqrt(
+            self.u_m + self.common_u_m
+        )
+        return max(own, 1e-3 * self.u_m)
 
 
 @dataclass(frozen=True)
@@ -46,11 +59,13 @@ def combine(first: ZeroFound, second: ZeroFound) -> ZeroFound:
         if not found.u_m > 0.0:
             raise ValueError(f"the scan {found.scan!r}: uncertainty {found.u_m} m is not positive")
     # Written with ratios, because squares of the uncertainties can overflow or vanish.
-    apart_u_m = math.hypot(first.u_m, second.u_m)
-    share_1, share_2 = (second.u_m / apart_u_m) ** 2, (first.u_m / apart_u_m) ** 2
+    own_1_m, own_2_m = first.own_u_m, second.own_u_m
+    common_u_m = max(first.common_u_m, second.common_u_m)
+    apart_u_m = math.hypot(own_1_m, own_2_m)
+    share_1, share_2 = (own_2_m / apart_u_m) ** 2, (own_1_m / apart_u_m) ** 2
     birge = max(1.0, abs(first.zero_m - second.zero_m) / apart_u_m)
     zero_m = share_1 * first.zero_m + share_2 * second.zero_m
-    u_m = first.u_m * (second.u_m / apart_u_m) * birge
+    u_m = math.hypot(own_1_m * (own_2_m / apart_u_m) * birge, common_u_m)
     _refuse_not_finite(f"the scans {first.scan!r} and {second.scan!r} together", zero_m, u_m)
     if not u_m > 0.0:
         raise ValueError(f"the scans {first.scan!r} and {second.scan!r}: no uncertainty is left")
@@ -59,6 +74,7 @@ def combine(first: ZeroFound, second: ZeroFound) -> ZeroFound:
         zero_m=zero_m,
         u_m=u_m,
         time_s=share_1 * first.time_s + share_2 * second.time_s,
+        common_u_m=common_u_m,
     )
 
 

@@ -214,6 +214,8 @@ def _doing(state: RunState) -> str:
     if state.phase == "new":
         return "nothing moves"
     if state.phase == "ended":
+        if not state.at_rest:
+            return "the run has ended; THE STAGE MAY STILL MOVE"
         return "the run has ended; nothing moves"
     pending = state.pending
     if pending is None:
@@ -239,6 +241,8 @@ def _next_action(state: RunState) -> str:
     """What the operator does next."""
     if state.phase == "new":
         return "Begin the run"
+    if state.phase == "ended" and not state.at_rest:
+        return "Use the power switch of the stage's controller"
     if state.phase == "ended":
         return {
             "accepted": "Done. The stage stands at the zero; leave it there",

@@ -6,6 +6,7 @@ conductor lives in a thread of its own and knows no screen; screens read the boa
 
 from __future__ import annotations
 
+import contextlib
 import threading
 from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
@@ -14,7 +15,7 @@ from bench.errors import EvenarmError, JournalError, MotionRefused
 from bench.journal import finite
 from bench.quantities import StagePosition
 from bench.spec.model import BenchSpec
-from drivers.contracts import DeviceError, StageState
+from drivers.contracts import DeviceError, ReadingInvalid, StageState
 
 from . import inputs as said
 from .board import Board
@@ -22,7 +23,14 @@ from .decide import decide
 from .devices import Devices
 from .guard import Guard
 from .locating import findings, locate_readings
-from .scanning import Readings, ScanStopped, perform_step_scan, perform_sweep, wait_for_rest
+from .scanning import (
+    Readings,
+    ScanStopped,
+    perform_step_scan,
+    perform_sweep,
+    sleep_in_slices,
+    wait_for_rest,
+)
 from .state import Event, Pending, RunState, Setup, evolve
 
 if TYPE_CHECKING:  # the class brings the database library, which the first screen need not wait for
@@ -56,33 +64,33 @@ class Conductor:
         self._sources = {source.name: source for source in spec.sources}
         self._readings: Readings | None = None
         self._said = threading.Condition()
-        self._answer: tuple[str, bool, str] | None = None
+        self._asking: str | None = None
+        self._answer: tuple[bool, str] | None = None
         self._stop: tuple[str, str] | None = None
         self._stop_noted = False
+        self.at_rest = True
 
     # --- from other threads ---------------------------------------------------------------------
 
     def answer(self, question_id: str, accepted: bool, by: str) -> None:
-        """Answer a question; one that is not open any more is ignored."""
+        """Answer the open question; an answer to any other is ignored."""
         with self._said:
-            self._answer = (question_id, accepted, by)
-            self._said.notify_all()
+            if question_id == self._asking and self._answer is None:
+                self._answer = (accepted, by)
+                self._said.notify_all()
 
     def stop(self, by: str, reason: str) -> None:
         """Software stop. The axis is told from a thread of its own, ahead of everything queued."""
         with self._said:
-            again = self._stop is not None
             self._stop = self._stop or (by, reason)
             self._said.notify_all()
-        if not again:
-            threading.Thread(target=self._stop_axis, name="software-stop", daemon=True).start()
+        # Every press sends one: the first may have been lost on its way.
+        threading.Thread(target=self._stop_axis, name="software-stop", daemon=True).start()
 
     def _stop_axis(self) -> None:
-        try:
+        # The run's own thread asks again while it brings everything to rest, and reports.
+        with contextlib.suppress(DeviceError):
             self._guard.stop()
-        except DeviceError:
-            # The run's own thread asks again while it brings everything to rest, and reports.
-            return
 
     # --- the run --------------------------------------------------------------------------------
 
@@ -93,22 +101,35 @@ class Conductor:
         whose motion has no outcome in the journal, and makes this one ask before it moves.
         """
         try:
-            state = self._guard.state()
-            self._board.stage(state)
-            known = state.known and not interrupted
-            body = {**started, "position_m": state.position_m if known else None}
-            body["position_known"] = known
-            self._feed(said.Begin(body, interrupted, self._now()))
+            self._begin(started, interrupted)
             while self.state.phase != "ended":
                 self._feed(self._next())
         except JournalError:
-            self._halt_quietly()
+            self.at_rest = self._at_rest() is not None
             raise
-        except BaseException:
-            self._halt_quietly()
-            self._feed_fault("the program failed; its own error follows on screen")
+        except BaseException as error:
+            # What is not foreseen is written down and told; the stage comes to rest before either.
+            failed = self._fail(f"the program failed: {type(error).__name__}: {error}", "program")
+            self.at_rest = failed.at_rest
+            with contextlib.suppress(EvenarmError):
+                self._feed(failed)
             raise
+        self.at_rest = self.state.at_rest
         return self.state
+
+    def _begin(self, started: Mapping[str, Any], interrupted: str) -> None:
+        failed: said.Failed | None = None
+        body = {**started, "position_m": None, "position_known": False}
+        try:
+            state = self._guard.state()
+            self._board.stage(state)
+            if state.known and not interrupted:
+                body |= {"position_m": state.position_m, "position_known": True}
+        except DeviceError as error:
+            failed = self._fail(error.what, error.device or "stage", error.mend)
+        self._feed(said.Begin(body, interrupted, self._now()))
+        if failed is not None:
+            self._feed(failed)
 
     def _next(self) -> said.Input:
         try:
@@ -118,6 +139,8 @@ class Conductor:
         except ScanStopped:
             return self._come_to_rest()
         except DeviceError as error:
+            if self._stop is not None:  # a stop in the middle of a call looks like a failure
+                return self._come_to_rest()
             return self._fail(error.what, error.device or "a device", error.mend)
         except MotionRefused as error:
             if self._stop is not None:
@@ -155,40 +178,30 @@ class Conductor:
             return said.StopAsked(by, reason, self._now())
         state = self._at_rest()
         position_m = state.position_m if state is not None and state.known else None
-        return said.Stopped(position_m, position_m is not None, reason, self._now())
+        at_rest = state is not None
+        return said.Stopped(position_m, position_m is not None, at_rest, reason, self._now())
 
-    def _fail(self, what: str, device: str, mend: str) -> said.Failed:
+    def _fail(self, what: str, device: str, mend: str = "report it") -> said.Failed:
         state = self._at_rest()
         known = state is not None and state.known
         position_m = state.position_m if state is not None and known else None
-        return said.Failed(what, device, mend, position_m, known, self._now())
+        return said.Failed(what, device, mend, position_m, known, state is not None, self._now())
 
     def _at_rest(self) -> StageState | None:
-        """Stop the axis and wait for it; None where it does not answer or does not stop."""
-        try:
-            self._guard.stop()
-            until_s = self._now() + REST_TIMEOUT_S
-            while (state := self._guard.state()).moving:
+        """Stop the axis, again and again, until a read-back says that it stands still.
+
+        None where none does within REST_TIMEOUT_S: then nobody may say that nothing moves.
+        """
+        until_s = self._now() + REST_TIMEOUT_S
+        while self._now() < until_s:
+            with contextlib.suppress(DeviceError):
+                self._guard.stop()
+                state = self._guard.state()
                 self._board.stage(state)
-                if self._now() > until_s:
-                    return None
-                self._devices.clock.sleep_s(0.02)
-        except DeviceError:
-            return None
-        self._board.stage(state)
-        return state
-
-    def _halt_quietly(self) -> None:
-        try:
-            self._guard.stop()
-        except DeviceError:
-            return
-
-    def _feed_fault(self, what: str) -> None:
-        try:
-            self._feed(said.Failed(what, "program", "report it", None, False, self._now()))
-        except EvenarmError:
-            return
+                if not state.moving:
+                    return state
+            self._devices.clock.sleep_s(0.05)
+        return None
 
     # --- performing -----------------------------------------------------------------------------
 
@@ -209,13 +222,15 @@ class Conductor:
 
     def _wait_for_answer(self, question_id: str) -> said.Input:
         with self._said:
-            while self._stop is None:
-                if self._answer is not None and self._answer[0] == question_id:
-                    _, accepted, by = self._answer
-                    self._answer = None
-                    return said.Answered(accepted, by, self._now())
-                self._said.wait()
-        raise ScanStopped
+            self._asking = question_id
+            try:
+                self._said.wait_for(lambda: self._stop is not None or self._answer is not None)
+                answer = self._answer
+            finally:
+                self._asking = self._answer = None
+        if self._stop is not None or answer is None:
+            raise ScanStopped
+        return said.Answered(*answer, self._now())
 
     def _change_source(self, name: str) -> said.Input:
         source = self._sources[name]
@@ -225,18 +240,17 @@ class Conductor:
                 timeout_s=CHANGE_TIMEOUT_S,
             )
         elif self._devices.select_by_simulated_hand is not None:
-            self._sleep(source.change_time_s)
+            self._wait(source.change_time_s)
             self._devices.select_by_simulated_hand(name)
-        self._sleep(source.warm_up_s)
+        self._wait(source.warm_up_s)
         return said.SourceReady(self._now())
 
-    def _sleep(self, duration_s: float) -> None:
-        """Let bench time pass in slices, so that a stop is heard."""
-        until_s = self._now() + duration_s
-        while (left_s := until_s - self._now()) > 1e-9:
-            self._may_go_on()
-            self._devices.clock.sleep_s(min(left_s, 0.1))
-            self._board.time(self._now())
+    def _wait(self, duration_s: float) -> None:
+        sleep_in_slices(self._devices, duration_s, self._may_go_on_and_tell)
+
+    def _may_go_on_and_tell(self) -> None:
+        self._may_go_on()
+        self._board.time(self._now())
 
     def _home(self) -> said.Input:
         self._guard.start_home()
@@ -301,14 +315,24 @@ class Conductor:
                 increment_m=float(body["increment_m"]),
                 **common,
             )
-        if readings.signal.size:
-            # Positions as they go into the locating: smoothed, so not those kept block by block.
-            self._journal.append_readings(
-                self.setup.run, f"{name} as located", readings.columns, bench_time_s=self._now()
+        if not readings.signal.size:
+            raise ReadingInvalid(
+                "the scan brought no usable reading",
+                device="detector",
+                mend="compare [detector] rate and [stage] acceleration with the real ones",
             )
+        # Positions as they go into the locating: smoothed, so not those kept block by block.
+        self._journal.append_readings(
+            self.setup.run, f"{name} as located", readings.columns, bench_time_s=self._now()
+        )
         self._readings = readings
-        mean_time_s = float(readings.time_s.mean()) if readings.time_s.size else self._now()
-        return said.ScanEnded(state.position_m, readings.signal.size, mean_time_s, self._now())
+        return said.ScanEnded(
+            state.position_m,
+            (float(readings.position_m.min()), float(readings.position_m.max())),
+            readings.signal.size,
+            float(readings.time_s.mean()),
+            self._now(),
+        )
 
     def _locate(self, body: Mapping[str, Any]) -> said.Input:
         assert self._readings is not None

@@ -30,13 +30,16 @@ from .inputs import (
     Stopped,
 )
 from .results import measurements, result_quantities
-from .state import Event, RunState, Setup
+from .state import POSITION, Event, RunState, Setup
 from .text import ProcedureStep
 
 __all__ = ["MOST_LEGS", "MOST_RETURNS", "decide"]
 
 MOST_LEGS = 60
 MOST_RETURNS = 2
+NOT_AT_REST = (
+    "the stage did not confirm that it stands still: use the power switch of its controller"
+)
 
 
 # --- the decision -------------------------------------------------------------------------------
@@ -59,8 +62,7 @@ def _decide(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...]
         case StopAsked():
             return (Event("stop-requested", {"by": happened.by, "reason": happened.reason}),)
         case Stopped():
-            stopped = _where(state, happened)
-            return (Event("stopped", stopped), _end(setup, state, "stopped", happened.reason))
+            return _stopped(setup, state, happened)
         case Failed():
             return _failed(setup, state, happened)
         case Continue():
@@ -72,12 +74,16 @@ def _decide(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...]
 def _begin(setup: Setup, state: RunState, happened: Begin) -> tuple[Event, ...]:
     if state.phase != "new":
         return ()
-    started = Event("run-started", happened.body)
-    if happened.body.get("position_known") and not happened.interrupted:
-        return (started,)
-    why = happened.interrupted or "The stage does not know where it is."
+    return (Event("run-started", {**happened.body, "interrupted": happened.interrupted}),)
+
+
+def _find_position(setup: Setup, state: RunState) -> tuple[Event, ...]:
+    """Nothing moves from a position that is not known, homing neither, before somebody agreed."""
+    if state.may_home:
+        return (Event("home-intended", {"why": "the stage position is not known"}),)
+    why = state.interrupted or "The stage does not know where it is."
     question = {
-        "id": "position",
+        "id": POSITION,
         "kind": "confirm",
         "title": "The stage position is not known",
         "lines": [
@@ -86,7 +92,7 @@ def _begin(setup: Setup, state: RunState, happened: Begin) -> tuple[Event, ...]:
             "Yes: it is homed now, which moves it. No: the run ends and nothing moves.",
         ],
     }
-    return (started, *_ask(setup, question))
+    return _ask(setup, question)
 
 
 def _ask(setup: Setup, question: Mapping[str, Any]) -> tuple[Event, ...]:
@@ -108,7 +114,8 @@ def _outcome(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...
         case "question", Answered():
             answer = _answer(pending.body, happened.accepted, happened.by)
             if happened.accepted and "source" in pending.body:
-                return (answer, Event("source-selected", {"source": pending.body["source"]}))
+                # In place, but perhaps not warm yet: that is waited for like any other change.
+                return (answer, Event("source-intended", {"source": pending.body["source"]}))
             return (answer,)
         case "source", SourceReady():
             return (Event("source-selected", {"source": pending.body["source"]}),)
@@ -123,12 +130,13 @@ def _outcome(setup: Setup, state: RunState, happened: Input) -> tuple[Event, ...
                 "name": pending.body["name"],
                 "source": pending.body["source"],
                 "rows": happened.rows,
+                "read_m": list(happened.read_m),
                 "position_m": happened.position_m,
                 "mean_time_s": happened.mean_time_s,
             }
             return (Event("scan-done", body),)
         case "locate", LocateEnded():
-            kept = {key: pending.body[key] for key in ("scan", "name", "source")}
+            kept = {key: pending.body[key] for key in ("scan", "name", "source", "read_m")}
             return (Event("located", {**kept, **happened.body}),)
         case _:
             return ()
@@ -140,7 +148,19 @@ def _where(state: RunState, happened: Stopped | Failed) -> dict[str, Any]:
     After a crash a controller may still claim one; only homing restores the trust.
     """
     known = happened.position_known and state.position_known
-    return {"position_m": happened.position_m if known else None, "position_known": known}
+    return {
+        "position_m": happened.position_m if known else None,
+        "position_known": known,
+        "at_rest": happened.at_rest,
+    }
+
+
+def _stopped(setup: Setup, state: RunState, happened: Stopped) -> tuple[Event, ...]:
+    stopped = Event("stopped", _where(state, happened))
+    if not happened.at_rest:
+        reason = f"{happened.reason}, but {NOT_AT_REST}"
+        return (stopped, _end(setup, state, "fault", reason))
+    return (stopped, _end(setup, state, "stopped", happened.reason))
 
 
 def _failed(setup: Setup, state: RunState, happened: Failed) -> tuple[Event, ...]:
@@ -153,6 +173,8 @@ def _failed(setup: Setup, state: RunState, happened: Failed) -> tuple[Event, ...
     reason = f"{happened.device}: {happened.what}"
     if happened.mend:
         reason += f" ({happened.mend})"
+    if not happened.at_rest:
+        reason += f"; {NOT_AT_REST}"
     return (Event("move-failed", body), _end(setup, state, "fault", reason))
 
 
@@ -173,7 +195,7 @@ def _continue(setup: Setup, state: RunState) -> tuple[Event, ...]:
     if state.refused:
         return (_end(setup, state, "stopped", state.refused),)
     if not state.position_known:
-        return (Event("home-intended", {"why": "the stage position is not known"}),)
+        return _find_position(setup, state)
     if state.leg is not None:
         return _leg_on(setup, state, state.leg)
     if not state.step_open:
@@ -251,6 +273,8 @@ def _scan(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ..
     plan = _plan(setup, state)
     final = next((leg for leg in plan.legs if leg.purpose == "final"), None)
     bracketed = bool(plan.legs) and plan.legs[0].purpose != "search"
+    if state.legs_run >= MOST_LEGS:
+        return _not_found(setup, state, f"{MOST_LEGS} scans were made and the zero is not located")
     if not state.missed and final is not None and bracketed:
         return (_chosen(final, plan.expected_time_s),)
     why = state.missed or "the zero is not bracketed well enough for it"
@@ -274,7 +298,7 @@ def _scan(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ..
 
 def _leg_on(setup: Setup, state: RunState, leg: Leg) -> tuple[Event, ...]:
     if state.source != leg.source:
-        return _change_source(setup, leg)
+        return _change_source(setup, state, leg)
     facts = setup.facts
     ends = scan_ends(facts, leg)
     if state.at not in {"overshoot", "run-up"}:
@@ -301,11 +325,11 @@ def _leg_on(setup: Setup, state: RunState, leg: Leg) -> tuple[Event, ...]:
     return (Event("scan-intended", body),)
 
 
-def _change_source(setup: Setup, leg: Leg) -> tuple[Event, ...]:
+def _change_source(setup: Setup, state: RunState, leg: Leg) -> tuple[Event, ...]:
     if setup.source_change != "hand":
         return (Event("source-intended", {"source": leg.source}),)
     question = {
-        "id": f"source {leg.source}",
+        "id": f"source {leg.source} for scan {state.scans_run + 1}",
         "kind": "confirm",
         "title": f"Change the source to: {leg.source}",
         "lines": [
@@ -354,10 +378,29 @@ def _move_to_zero(setup: Setup, state: RunState) -> tuple[Event, ...]:
     low_m, high_m = facts.travel_m
     if not low_m <= zero.zero_m <= high_m:
         return _not_found(setup, state, "the zero lies outside the travel limits")
-    before_m = _within(setup, zero.zero_m - facts.approach * facts.reversal_allowance_m)
+    before_m = _before_zero_m(setup, state, zero.zero_m)
+    if abs(zero.zero_m - before_m) < facts.reversal_allowance_m * (1.0 - 1e-9):
+        reason = (
+            "the zero lies so near the end of the travel that it cannot be approached from the "
+            "right side with the reversal allowance; move the other arm"
+        )
+        return (Event("step-done", {"passed": False}), _end(setup, state, "rejected", reason))
     if state.at != "approach":
         return (_move(setup, state, before_m, "approach", "to approach the zero from one side"),)
     return (_move(setup, state, zero.zero_m, "zero", "to the zero"),)
+
+
+def _before_zero_m(setup: Setup, state: RunState, zero_m: float) -> float:
+    """Where to come from: at least the reversal allowance away, and as far as the scans came.
+
+    The play that a scan took up before it met the packet is then taken up in the same way here.
+    """
+    facts = setup.facts
+    before_m = zero_m - facts.approach * facts.reversal_allowance_m
+    if state.scan_from_m is not None:
+        further = min if facts.approach > 0 else max
+        before_m = further(before_m, state.scan_from_m)
+    return _within(setup, before_m)
 
 
 def _compare(setup: Setup, state: RunState, step: ProcedureStep) -> tuple[Event, ...]:

@@ -55,11 +55,11 @@ def parse_pace(text: str) -> float | None:
         pace = float(text)
     except ValueError:
         pace = 0.0
-    if not 0.01 <= pace <= 1e6:
+    if not 0.1 <= pace <= 1e6:
         raise UsageError(
             "the pace cannot be used",
             where="--pace",
-            why=f"{text!r} is neither real, fast nor a number from 0.01 to 1000000",
+            why=f"{text!r} is neither real, fast nor a number from 0.1 to 1000000",
             mend="give --pace real, --pace fast, or how many times faster, such as --pace 10",
         )
     return pace
@@ -67,7 +67,10 @@ def parse_pace(text: str) -> float | None:
 
 @dataclass(frozen=True)
 class Devices:
-    """Everything that a run talks to. ``simulated`` only if every device is."""
+    """Everything that a run talks to. ``simulated`` only if every device is.
+
+    ``residual_opd_m`` is what a simulated bench hides: the OPD now, for a wavelength in metres.
+    """
 
     stage: Port[Stage]
     detector: Port[Detector]
@@ -75,7 +78,7 @@ class Devices:
     clock: Clock
     simulated: bool
     select_by_simulated_hand: Callable[[str], None] | None
-    reveal: Callable[[], Any] | None
+    residual_opd_m: Callable[[float], float] | None
 
     def identities(self) -> dict[str, Identity]:
         """Ask every device who it is. Raises BenchFault."""
@@ -132,7 +135,7 @@ def open_devices(spec: BenchSpec, *, pace: float | None = None) -> Devices:
         clock=clock,
         simulated=simulated,
         select_by_simulated_hand=getattr(detector, "operator_selects", None),
-        reveal=(lambda: detector.world.truth) if hasattr(detector, "world") else None,
+        residual_opd_m=detector.world.residual_opd_m if hasattr(detector, "world") else None,
     )
 
 

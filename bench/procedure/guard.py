@@ -10,6 +10,7 @@ The guard is part of a program. It is no interlock and no emergency stop.
 
 from __future__ import annotations
 
+import contextlib
 import math
 import threading
 import time
@@ -24,7 +25,9 @@ from .ports import Port
 
 __all__ = ["Guard", "Refusal", "refusal"]
 
-CALL_TIMEOUT_S = 5.0
+# One call in progress is what a stop may have to wait for, so read-backs get little time.
+STATE_TIMEOUT_S = 0.5
+CALL_TIMEOUT_S = 2.0
 
 Refusal = tuple[str, str, str]  # what, why, mend
 
@@ -92,6 +95,7 @@ class Guard:
         self._lease_until: float | None = None
         self._ended = threading.Event()
         self.lapsed = False
+        self._stop_owed = False
         self._watch: threading.Thread | None = None
         if watch:
             self._watch = threading.Thread(target=self._watch_lease, name="lease", daemon=True)
@@ -102,7 +106,7 @@ class Guard:
     def state(self) -> StageState:
         """Live read-back. Raises DeviceError."""
         return self._port.call(
-            lambda s: s.state(timeout_s=CALL_TIMEOUT_S), timeout_s=CALL_TIMEOUT_S
+            lambda s: s.state(timeout_s=STATE_TIMEOUT_S), timeout_s=STATE_TIMEOUT_S
         )
 
     # --- arming ---------------------------------------------------------------------------------
@@ -130,7 +134,7 @@ class Guard:
             self._must_be_armed()
             stage.start_home(timeout_s=CALL_TIMEOUT_S)
 
-        self._port.call(begin, timeout_s=CALL_TIMEOUT_S)
+        self._begin(begin)
 
     # --- moving ---------------------------------------------------------------------------------
 
@@ -151,7 +155,7 @@ class Guard:
             self._must_be_armed()
             stage.start_move(target.m, speed_m_s, timeout_s=CALL_TIMEOUT_S)
 
-        self._port.call(begin, timeout_s=CALL_TIMEOUT_S)
+        self._begin(begin)
 
     def renew(self) -> None:
         """Keep the motion allowed for another lease."""
@@ -178,6 +182,14 @@ class Guard:
 
     # --- inside ---------------------------------------------------------------------------------
 
+    def _begin(self, begin: Callable[[Stage], None]) -> None:
+        try:
+            self._port.call(begin, timeout_s=CALL_TIMEOUT_S)
+        except DeviceError:
+            # The command may have gone out, or may still go out of a driver that takes its time.
+            self._port.post_urgent(lambda s: s.stop(timeout_s=CALL_TIMEOUT_S))
+            raise
+
     def _must_be_armed(self) -> None:
         with self._lock:
             armed, stopped, lapsed = self._armed, self._stopped, self.lapsed
@@ -199,20 +211,23 @@ class Guard:
         return MotionRefused(what, where="stage", why=why, mend=mend)
 
     def check_lease(self) -> bool:
-        """Stop the axis if the lease has lapsed; whether it had."""
+        """Stop the axis if the lease has lapsed, until a stop was answered; whether it had.
+
+        Raises DeviceError where this attempt was not answered: call again.
+        """
         with self._lock:
-            lapsed = self._lease_until is not None and self._wall() > self._lease_until
-            if lapsed:
-                self.lapsed = True
+            if self._lease_until is not None and self._wall() > self._lease_until:
+                self.lapsed = self._stop_owed = True
                 self._lease_until = None
-        if lapsed:
+            owed = self._stop_owed
+        if owed:
             self._stop_device()
-        return lapsed
+            with self._lock:
+                self._stop_owed = False
+        return owed
 
     def _watch_lease(self) -> None:
         while not self._ended.wait(self._lease_s / 10):
-            try:
+            # A stop that was not answered is owed still, and asked for again at the next turn.
+            with contextlib.suppress(DeviceError):
                 self.check_lease()
-            except DeviceError:
-                # The conductor's own next call meets the same device and reports it.
-                continue

@@ -47,7 +47,10 @@ class MoveEnded:
 
 @dataclass(frozen=True)
 class ScanEnded:
+    """``read_m`` are the lowest and highest position with a usable reading."""
+
     position_m: float
+    read_m: tuple[float, float]
     rows: int
     mean_time_s: float
     time_s: float
@@ -70,6 +73,7 @@ class Failed:
     mend: str
     position_m: float | None
     position_known: bool
+    at_rest: bool
     time_s: float
 
 
@@ -82,10 +86,11 @@ class StopAsked:
 
 @dataclass(frozen=True)
 class Stopped:
-    """The stage is at rest after a stop, or could not say."""
+    """What a stop came to. ``at_rest`` only where a read-back said that nothing moves."""
 
     position_m: float | None
     position_known: bool
+    at_rest: bool
     reason: str
     time_s: float
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from bench.fringes import locate
 from bench.fringes.model import Estimate, Knowledge, Located, Scan
+from bench.fringes.results import scale_share
 from bench.spec.model import BenchSpec, SourceSpec
 
 from .scanning import POLL_S, Readings
@@ -22,6 +23,7 @@ def locate_readings(spec: BenchSpec, source: SourceSpec, readings: Readings) -> 
         x=readings.position_m,
         signal=readings.signal,
         opd_per_x=spec.opd_per_m,
+        opd_per_x_relative_uncertainty=spec.stage.scale_uncertainty,
         saturated=readings.saturated > 0,
         dark=spec.detector.dark,
     )
@@ -45,7 +47,10 @@ def findings(
         "false_alarm_probability": located.false_alarm_probability,
         "notices": [{"code": n.code, "message": n.message} for n in located.notices],
     }
-    if not located.found or located.zero is None:
+    cut = _cut(spec, readings, located)
+    if cut:
+        body |= {"found": False, "reason": cut}
+    if not body["found"] or located.zero is None:
         body["weakest_contrast"] = located.weakest_contrast
         return body
     zero_m = located.zero.value
@@ -53,6 +58,7 @@ def findings(
     body["zero_u_m"] = math.hypot(
         located.zero.standard_uncertainty, _axis_u_m(spec, located, speed_m_s)
     )
+    body["zero_common_u_m"] = _scale_u_m(spec, located)
     order = np.argsort(readings.position_m)
     body["zero_time_s"] = float(
         np.interp(zero_m, readings.position_m[order], readings.time_s[order])
@@ -73,6 +79,31 @@ def findings(
         body["fringe_kind"] = located.fringe_zero.kind
         body["fringe_probability"] = located.fringe_zero.probability
     return body
+
+
+def _cut(spec: BenchSpec, readings: Readings, located: Located) -> str:
+    """Why a zero found is not one to drive to: it lies where the scan saw half a packet or none."""
+    if not located.found or located.zero is None:
+        return ""
+    room_m = 0.0
+    if located.coherence is not None and located.coherence.packet_width_m is not None:
+        room_m = located.coherence.packet_width_m.value / abs(spec.opd_per_m) / 2.0
+    low_m, high_m = readings.position_m.min() + room_m, readings.position_m.max() - room_m
+    if low_m <= located.zero.value <= high_m:
+        return ""
+    return "the packet is cut by the end of the scan"
+
+
+def _scale_u_m(spec: BenchSpec, located: Located) -> float:
+    """The part of the zero's uncertainty that the axis' scale gives every scan alike."""
+    if spec.reference_wavelength_m is None:
+        return 0.0
+    return scale_share(
+        located.residual_glass,
+        spec.reference_wavelength_m,
+        spec.stage.scale_uncertainty,
+        spec.opd_per_m,
+    )
 
 
 def _axis_u_m(spec: BenchSpec, located: Located, speed_m_s: float | None) -> float:

@@ -15,6 +15,7 @@ from concurrent.futures import TimeoutError as FutureTimeout
 from dataclasses import dataclass, field
 from typing import Any, Generic, TypeVar
 
+from bench.errors import EvenarmError
 from drivers.contracts import Device, DeviceError, NoReply, NotConnected
 
 DeviceT = TypeVar("DeviceT", bound=Device)
@@ -55,22 +56,30 @@ class Port(Generic[DeviceT]):
         return self._submit(_ORDINARY, work, timeout_s)
 
     def urgent(self, work: Callable[[DeviceT], ResultT], *, timeout_s: float) -> ResultT:
-        """Do ``work(device)`` before anything that still waits. Raises DeviceError."""
+        """Do ``work(device)`` before anything that still waits. Raises DeviceError.
+
+        An urgent call whose caller gave up waiting is still done as soon as the device is free.
+        """
         return self._submit(_URGENT, work, timeout_s)
+
+    def post_urgent(self, work: Callable[[DeviceT], object]) -> None:
+        """As ``urgent``, but nobody waits for it; nothing happens on a port that is closed."""
+        with self._wake:
+            if not self._closed:
+                self._push(_URGENT, lambda: work(self.device))
 
     def _submit(
         self, priority: int, work: Callable[[DeviceT], ResultT], timeout_s: float
     ) -> ResultT:
-        job = _Job(priority, next(self._numbers), lambda: work(self.device), Future())
         with self._wake:
             if self._closed:
                 raise NotConnected(f"{self.name} is closed", device=self.name)
-            heapq.heappush(self._jobs, job)
-            self._wake.notify()
+            job = self._push(priority, lambda: work(self.device))
         try:
             result: ResultT = job.future.result(timeout=timeout_s + self.grace_s)
         except FutureTimeout:
-            job.future.cancel()
+            if priority != _URGENT:
+                job.future.cancel()
             raise NoReply(
                 f"{self.name} did not answer within {timeout_s + self.grace_s:.1f} s",
                 device=self.name,
@@ -79,7 +88,23 @@ class Port(Generic[DeviceT]):
         except DeviceError as error:
             error.device = error.device or self.name
             raise
+        except EvenarmError:
+            raise
+        except Exception as error:
+            # A driver that breaks in its own way ends a run no differently from one that says so.
+            raise DeviceError(
+                f"its driver failed: {type(error).__name__}: {error}",
+                device=self.name,
+                mend="report it to whoever wrote the driver",
+            ) from error
         return result
+
+    def _push(self, priority: int, work: Callable[[], Any] | None) -> _Job:
+        """Queue a job; ``_wake`` is held."""
+        job = _Job(priority, next(self._numbers), work, Future())
+        heapq.heappush(self._jobs, job)
+        self._wake.notify()
+        return job
 
     def _serve(self) -> None:
         while True:
@@ -106,6 +131,5 @@ class Port(Generic[DeviceT]):
                 return
             self._closed = True
             for work in (self.device.close, None):
-                heapq.heappush(self._jobs, _Job(_LAST, next(self._numbers), work, Future()))
-            self._wake.notify()
+                self._push(_LAST, work)
         self._thread.join(timeout=self.grace_s)

@@ -6,6 +6,7 @@ taken at the bench times they carry, smoothed over a short stretch, shifted by t
 
 from __future__ import annotations
 
+import contextlib
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
@@ -15,12 +16,19 @@ from numpy.typing import NDArray
 
 from bench.quantities import StagePosition
 from bench.spec.model import BenchSpec
-from drivers.contracts import Block, Detector, MotionFailed, StageState
+from drivers.contracts import Block, Detector, DeviceError, MotionFailed, StageState
 
 from .devices import Devices
 from .guard import Guard
 
-__all__ = ["Readings", "ScanStopped", "perform_step_scan", "perform_sweep", "wait_for_rest"]
+__all__ = [
+    "Readings",
+    "ScanStopped",
+    "perform_step_scan",
+    "perform_sweep",
+    "sleep_in_slices",
+    "wait_for_rest",
+]
 
 FloatArray = NDArray[np.float64]
 
@@ -100,12 +108,27 @@ def wait_for_rest(
                 mend="look for an obstacle or a stalled drive, then home the stage",
             )
         devices.clock.sleep_s(poll_s)
-    devices.clock.sleep_s(spec.stage.settle_s)
+    guard.rest()
+    if guard.lapsed:
+        raise MotionFailed(
+            "the stage was stopped on its way because the program had fallen silent",
+            device="stage",
+            mend="look what keeps this computer busy, then run again",
+        )
+    sleep_in_slices(devices, spec.stage.settle_s, may_go_on)
     state = guard.state()
     watch(state)
-    guard.rest()
     _check_arrival(state, target_m, spec)
     return state
+
+
+def sleep_in_slices(devices: Devices, duration_s: float, may_go_on: MayGoOn) -> None:
+    """Let bench time pass in slices, so that a stop is heard. Raises ScanStopped."""
+    clock = devices.clock
+    until_s = clock.now_s() + duration_s
+    while (left_s := until_s - clock.now_s()) > 1e-9:
+        may_go_on()
+        clock.sleep_s(min(left_s, 0.1))
 
 
 def _check_arrival(state: StageState, target_m: float | None, spec: BenchSpec) -> None:
@@ -228,15 +251,23 @@ def perform_sweep(
                     mend="look for an obstacle or a stalled drive, then home the stage",
                 )
         hand_over()
-    finally:
-        port.call(
-            lambda d: d.stop_stream(timeout_s=DETECTOR_TIMEOUT_S), timeout_s=DETECTOR_TIMEOUT_S
-        )
+    except BaseException:
+        # The axis first, whatever went wrong; and what went wrong is what is told.
+        with contextlib.suppress(DeviceError):
+            guard.stop()
+        with contextlib.suppress(DeviceError):
+            port.call(_end_stream, timeout_s=DETECTOR_TIMEOUT_S)
+        raise
+    port.call(_end_stream, timeout_s=DETECTOR_TIMEOUT_S)
     rest = wait_for_rest(
         guard, devices, spec, end_m, expected_s=1.0, watch=watch, may_go_on=may_go_on
     )
     whole = _join(blocks) if blocks else Block(np.empty(0), np.empty(0), np.empty(0, dtype=bool))
     return _steady_part(track, whole, start_m, stop_m, speed_m_s, spec), rest
+
+
+def _end_stream(detector: Detector) -> None:
+    detector.stop_stream(timeout_s=DETECTOR_TIMEOUT_S)
 
 
 def _join(blocks: list[Block]) -> Block:
@@ -313,6 +344,8 @@ def perform_step_scan(
         state = wait_for_rest(
             guard, devices, spec, target_m, expected_s=expected_s, watch=watch, may_go_on=may_go_on
         )
+        # A lagging detector still tells of the settling.
+        sleep_in_slices(devices, spec.detector.lag_s, may_go_on)
         block = devices.detector.call(
             lambda d: d.read(1, timeout_s=DETECTOR_TIMEOUT_S), timeout_s=DETECTOR_TIMEOUT_S
         )

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import contextlib
 import os
 import socket
 import threading
@@ -30,9 +29,17 @@ from .text import Procedure
 if TYPE_CHECKING:
     from bench.journal import Journal
 
-__all__ = ["RunOptions", "RunSession"]
+__all__ = ["Revealed", "RunOptions", "RunSession"]
 
 CLOSE_TIMEOUT_S = 15.0
+
+
+@dataclass(frozen=True)
+class Revealed:
+    """What a simulated bench hid. ``zero_m`` is a reading, approached as the stage stands now."""
+
+    zero_m: float
+    residual_opd_m: float
 
 
 @dataclass(frozen=True)
@@ -95,6 +102,7 @@ class RunSession:
         self._ended = threading.Event()
         self._stop_wanted: str | None = None
         self.error: EvenarmError | None = None
+        self.truth: Revealed | None = None
 
     # --- the run --------------------------------------------------------------------------------
 
@@ -110,10 +118,13 @@ class RunSession:
                 conductor.stop(self._options.operator, self._stop_wanted)
             state = conductor.run(self._started(), self._left_open.why)
             self._end_interrupted()
+            self._look_behind(state)
             return state
         finally:
-            self._close()
-            self._ended.set()
+            try:
+                self._close()
+            finally:
+                self._ended.set()
 
     def _open(self) -> Conductor:
         spec, options = self._spec, self._options
@@ -146,7 +157,7 @@ class RunSession:
         options, spec = self._options, self._spec
         if not options.unattended:
             return
-        acknowledged = options.acknowledged_by is not None
+        acknowledged = bool(options.acknowledged_by)
         if not devices.simulated and not (spec.allow_unattended and acknowledged):
             raise UsageError(
                 "this bench may not run unattended",
@@ -235,7 +246,7 @@ class RunSession:
 
     @property
     def started(self) -> bool:
-        return self._begun
+        return self._begun or self._thread is not None
 
     @property
     def finished(self) -> bool:
@@ -244,12 +255,21 @@ class RunSession:
     def view(self) -> LiveView:
         view = self._board.view()
         if self.error is not None and view.outcome is None:
+            at_rest = self._conductor is None or self._conductor.at_rest
             return replace(
                 view,
                 outcome="fault",
                 reason=" - ".join(line.strip() for line in self.error.lines()),
-                doing="nothing moves on account of this run",
-                next_action="Mend it, then run again",
+                doing=(
+                    "the run has ended; nothing moves"
+                    if at_rest
+                    else "the run has ended; THE STAGE MAY STILL MOVE"
+                ),
+                next_action=(
+                    "Mend it, then run again"
+                    if at_rest
+                    else "Use the power switch of the stage's controller"
+                ),
                 question=None,
             )
         return view
@@ -290,18 +310,24 @@ class RunSession:
             conductor.stop(self._options.operator, reason)
 
     def close(self, timeout_s: float = CLOSE_TIMEOUT_S) -> None:
-        if self._begun and not self.finished:
+        if self.started and not self.finished:
             self.stop("the program was closed")
         if self._thread is not None:
             self._thread.join(timeout=timeout_s)
 
-    def reveal(self) -> Any:
-        """The hidden truth of a simulated bench, None for a real one."""
-        if self._devices is None or self._devices.reveal is None:
-            return None
-        with contextlib.suppress(AttributeError):
-            return self._devices.reveal()
-        return None
+    def _look_behind(self, state: RunState) -> None:
+        """Keep what a simulated bench hides: the true OPD where the stage stands now."""
+        assert self._devices is not None
+        at_m = self._setup.at_wavelength_m
+        found = (state.findings or {}).get("at_wavelength")
+        if at_m is None and found is not None:
+            at_m = float(found["value"]) * 1e-9
+        hidden = self._devices.residual_opd_m
+        if hidden is None or at_m is None or state.position_m is None:
+            return
+        residual_m = hidden(at_m)
+        zero_m = state.position_m - residual_m / self._setup.facts.opd_per_m
+        self.truth = Revealed(zero_m=zero_m, residual_opd_m=residual_m)
 
 
 def _as_evenarm(error: Exception) -> EvenarmError:
@@ -314,5 +340,5 @@ def _as_evenarm(error: Exception) -> EvenarmError:
     return BenchFault(
         "the program failed in a way that it does not know",
         why=f"{type(error).__name__}: {error}",
-        mend="nothing moves any more; report it with the journal",
+        mend="report it with the journal",
     )

@@ -20,6 +20,7 @@ from .text import Procedure
 
 __all__ = ["Event", "Pending", "RunState", "Setup", "evolve"]
 
+POSITION = "position"  # the question whether the stage may home
 Phase = Literal["new", "running", "ended"]
 SourceChange = Literal["motor", "simulated", "hand"]
 
@@ -76,6 +77,10 @@ class RunState:
     scans_run: int = 0
     zeros: tuple[ZeroFound, ...] = ()
     missed: str = ""
+    interrupted: str = ""
+    may_home: bool = False
+    at_rest: bool = True
+    scan_from_m: float | None = None  # where the newest scan began to take up the play
     left_at_m: float | None = None
     left_at_s: float | None = None
     findings: Mapping[str, Any] | None = None  # the body of the last located packet
@@ -114,6 +119,7 @@ def _run_started(setup: Setup, state: RunState, body: Body) -> RunState:
         position_m=body.get("position_m"),
         position_known=bool(body.get("position_known")),
         began_s=float(body.get("bench_time_s", 0.0)),
+        interrupted=str(body.get("interrupted", "")),
     )
 
 
@@ -141,7 +147,8 @@ def _question_asked(_setup: Setup, state: RunState, body: Body) -> RunState:
 
 def _question_answered(_setup: Setup, state: RunState, body: Body) -> RunState:
     refused = "" if body["accepted"] else f"the operator said no to: {body['title']}"
-    return replace(state, pending=None, refused=refused)
+    may_home = state.may_home or (body["id"] == POSITION and bool(body["accepted"]))
+    return replace(state, pending=None, refused=refused, may_home=may_home)
 
 
 def _intended(kind: Literal["source", "home", "move", "scan"]) -> _Change:
@@ -171,6 +178,7 @@ def _move_done(_setup: Setup, state: RunState, body: Body) -> RunState:
         pending=None,
         position_m=position_m,
         at=role,
+        scan_from_m=position_m if role == "overshoot" else state.scan_from_m,
         left_at_m=position_m if at_zero else state.left_at_m,
         left_at_s=state.time_s if at_zero else state.left_at_s,
     )
@@ -195,9 +203,16 @@ def _located(setup: Setup, state: RunState, body: Body) -> RunState:
     assert belief is not None
     state = replace(state, pending=None, leg=None)
     if not body["found"]:
-        belief = belief.missed(leg.start_m, leg.stop_m, leg.detection_probability)
+        low_m, high_m = body["read_m"]  # no evidence of what was not read
+        belief = belief.missed(low_m, high_m, leg.detection_probability)
         return replace(state, belief=belief, missed=str(body.get("reason", "")))
-    zero = ZeroFound(str(body["name"]), body["zero_m"], body["zero_u_m"], body["zero_time_s"])
+    zero = ZeroFound(
+        scan=str(body["name"]),
+        zero_m=body["zero_m"],
+        u_m=body["zero_u_m"],
+        time_s=body["zero_time_s"],
+        common_u_m=body.get("zero_common_u_m", 0.0),
+    )
     shift_m = _glass_shift_m(setup.facts, leg) if leg.purpose == "search" else 0.0
     belief = belief.found(zero.zero_m, math.hypot(zero.u_m, shift_m))
     zeros = (*state.zeros, zero) if leg.purpose != "search" else state.zeros
@@ -229,6 +244,7 @@ def _stopped(_setup: Setup, state: RunState, body: Body) -> RunState:
         pending=None,
         position_m=body.get("position_m"),
         position_known=bool(body.get("position_known")),
+        at_rest=bool(body.get("at_rest", True)),
         at="",
     )
 
@@ -263,5 +279,6 @@ _CHANGES: dict[str, _Change] = {
     "judged": _judged,
     "measurement": _measurement,
     "stopped": _stopped,
+    "move-failed": _stopped,
     "run-ended": _run_ended,
 }

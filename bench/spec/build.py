@@ -52,6 +52,7 @@ def stage(table: schema.Stage, settings: Mapping[str, Any]) -> StageSpec:
         reversal_allowance_m=table.reversal_allowance,
         longest_move_m=longest_move_m(table),
         settings=settings,
+        scale_uncertainty=table.scale_uncertainty,
     )
 
 

@@ -38,6 +38,7 @@ class StageSpec:
     reversal_allowance_m: float
     longest_move_m: float
     settings: Mapping[str, Any] = field(default_factory=dict)
+    scale_uncertainty: float = 1e-3  # relative, of a reading's worth over a packet's width
 
 
 @dataclass(frozen=True)

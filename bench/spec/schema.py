@@ -162,6 +162,9 @@ class Stage(Table):
     longest_move: PositiveLength | None = Field(
         None, description='the most that one command may ask for, such as "5 mm"'
     )
+    scale_uncertainty: float = Field(
+        1e-3, ge=0, le=0.1, description="relative, a number from 0 to 0.1, such as 1e-3"
+    )
     settings: Settings = Field(default_factory=dict, description="a table of the driver's own keys")
 
 

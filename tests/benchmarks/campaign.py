@@ -52,13 +52,10 @@ def one(seed: int, records: Path) -> dict[str, Any]:
         "legs": state.legs_run,
         "reason": state.reason,
     }
-    if state.verdict is not None and state.left_at_m is not None:
-        at_m = spec.reference_wavelength_m
-        assert at_m is not None
-        true_m = session.reveal().group_zero_m(at_m, time_s=state.left_at_s)
-        residual = spec.opd_per_m * (state.left_at_m - true_m)
+    if state.verdict is not None and session.truth is not None:
+        residual = session.truth.residual_opd_m
         verdict = state.verdict
-        row["off"] = (verdict["zero_m"] - true_m) * 1e9
+        row["off"] = (verdict["zero_m"] - session.truth.zero_m) * 1e9
         row["u"] = verdict["zero_u_m"] * 1e9
         row["residual"] = residual * 1e9
         row["claimed"] = verdict["residual_opd_m"] * 1e9
