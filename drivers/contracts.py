@@ -301,7 +301,10 @@ class Context:
 
 @dataclass(frozen=True)
 class Driver:
-    """An entry point's object: how to check and to open one family of devices."""
+    """An entry point's object: how to check and to open one family of devices.
+
+    ``faults`` explains, in a line each, the kinds that ``world`` allows for ``fault[].kind``.
+    """
 
     name: str
     kind: Kind
@@ -311,3 +314,4 @@ class Driver:
     simulated: bool = False
     capabilities: frozenset[str] = frozenset()
     world: tuple[Setting, ...] = ()
+    faults: Mapping[str, str] = field(default_factory=dict, hash=False)

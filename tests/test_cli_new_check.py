@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import os
 import subprocess
@@ -291,6 +292,20 @@ def test_faults_are_those_that_the_drivers_declare() -> None:
     told = document(evenarm("drivers", "--faults", "--json"))
     assert [row["kind"] for row in told["faults"]] == list(setting.choices)
     assert {"at", "lasts"} <= {key["name"] for key in told["faults"][0]["keys"]}
+    assert {row["kind"]: row["doc"] for row in told["faults"]} == stage.faults
+    # Kinds and keys stand in one column, what they mean in another.
+    lines = [line for line in result.stdout.splitlines() if line.startswith("  ")]
+    column = 2 + max(len(kind) for kind in setting.choices) + 2
+    assert {line[column - 2 : column] for line in lines} == {"  "}
+    assert {line[:column].strip(): line[column:] for line in lines}.items() >= stage.faults.items()
+
+
+def test_a_fault_without_an_explanation_is_still_listed(monkeypatch: pytest.MonkeyPatch) -> None:
+    silent = dataclasses.replace(registry.load("stage", "simulated"), faults={})
+    monkeypatch.setattr(registry, "load", lambda kind, name: silent)
+    result = evenarm("drivers", "--faults")
+    assert result.exit_code == 0
+    assert "  lamp out\n" in result.stdout
 
 
 def test_settings_of_a_driver() -> None:

@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 
 import drivers.simulated
 from drivers.clock import VirtualClock
-from drivers.contracts import Context, DeviceRefused, NoReply
+from drivers.contracts import Context, DeviceRefused, Driver, NoReply
 from drivers.simulated.detector import SimulatedDetector
 from drivers.simulated.example import example_bench, example_context
 from drivers.simulated.faults import Fault, Faults
@@ -222,6 +222,14 @@ def test_every_fault_is_described_and_can_be_declared() -> None:
         assert name in kind.choices
         assert len(text) > 20
         assert world({"fault": [{"kind": name, "at": 1.0}]}).faults.of(name)
+
+
+@pytest.mark.parametrize("driver", [STAGE, DETECTOR, CHANGER, CLIMATE], ids=lambda d: d.kind)
+def test_a_driver_explains_every_fault_that_its_world_allows(driver: Driver) -> None:
+    (kind,) = [setting for setting in driver.world if setting.name == "fault[].kind"]
+    assert set(driver.faults) == set(kind.choices)
+    assert all(text and "\n" not in text for text in driver.faults.values())
+    assert len({driver, driver}) == 1  # what is declared can still be compared and kept in a set
 
 
 def test_a_world_that_cannot_be_is_refused_with_a_reason() -> None:

@@ -115,13 +115,14 @@ def _failed(failure: LoadFailure) -> dict[str, str]:
 
 
 def _faults(drivers: Any) -> list[dict[str, Any]]:
-    """Every kind of fault that a simulated driver declares, once, with the keys it may have."""
+    """Every kind of fault that a simulated driver declares, once, with what it is and its keys."""
     found: dict[str, dict[str, Any]] = {}
     for driver in drivers:
         kinds = [s for s in driver.world if s.name == "fault[].kind"]
         keys = [s for s in driver.world if s.name.startswith("fault[].") and s not in kinds]
         for kind in (kind for setting in kinds for kind in setting.choices):
-            entry = found.setdefault(kind, {"kind": kind, "drivers": [], "keys": []})
+            entry = found.setdefault(kind, {"kind": kind, "doc": "", "drivers": [], "keys": []})
+            entry["doc"] = entry["doc"] or driver.faults.get(kind, "")
             entry["drivers"].append(f"{driver.kind} {driver.name}")
             entry["keys"] = [
                 _setting(key) | {"name": key.name.removeprefix("fault[].")} for key in keys
@@ -174,10 +175,11 @@ def _show_faults(kinds: list[dict[str, Any]]) -> None:
         typer.echo("no simulated driver declares any fault")
         return
     typer.echo("faults that a [[fault]] table in world.toml may name as its kind:")
+    width = max(len(entry["kind"]) for entry in kinds)
     for entry in kinds:
-        typer.echo(printable(f"  {entry['kind']}"))
+        typer.echo(printable(f"  {entry['kind']:<{width}}  {entry['doc']}".rstrip()))
     typer.echo("its other keys:")
     for key in kinds[0]["keys"]:
         state = "required" if key["required"] else "optional"
         choices = f"; one of {', '.join(key['choices'])}" if key["choices"] else ""
-        typer.echo(printable(f"  {key['name']:<10} {state}; {key['doc']}{choices}"))
+        typer.echo(printable(f"  {key['name']:<{width}}  {state}; {key['doc']}{choices}"))

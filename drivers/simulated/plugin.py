@@ -77,6 +77,7 @@ STAGE = Driver(
     simulated=True,
     capabilities=frozenset({"home"}),
     world=WORLD_SETTINGS,
+    faults=FAULTS,
 )
 DETECTOR = Driver(
     "simulated",
@@ -87,6 +88,7 @@ DETECTOR = Driver(
     simulated=True,
     capabilities=frozenset({"stream", "operator_selects"}),
     world=WORLD_SETTINGS,
+    faults=FAULTS,
 )
 CHANGER = Driver(
     "simulated",
@@ -96,6 +98,7 @@ CHANGER = Driver(
     settings=(_CHANGE_TIME,),
     simulated=True,
     world=WORLD_SETTINGS,
+    faults=FAULTS,
 )
 CLIMATE = Driver(
     "simulated",
@@ -104,4 +107,5 @@ CLIMATE = Driver(
     _open_climate,
     simulated=True,
     world=WORLD_SETTINGS,
+    faults=FAULTS,
 )
