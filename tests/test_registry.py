@@ -76,8 +76,7 @@ def test_what_is_built_in_covers_what_the_package_declares() -> None:
         for kind, group in GROUPS.items()
         for name, target in points.get(group, {}).items()
     }
-    assert wanted <= set(BUILT_IN)
-    assert {row[:2] for row in wanted} >= {("stage", "simulated"), ("detector", "simulated")}
+    assert wanted == set(BUILT_IN)
 
 
 @pytest.mark.parametrize(("kind", "name", "target"), BUILT_IN)
@@ -93,6 +92,30 @@ def test_every_built_in_driver_loads(kind: str, name: str, target: str) -> None:
 def test_no_name_is_listed_twice() -> None:
     rows = [(row.kind, row.name) for row in available()]
     assert len(rows) == len(set(rows))
+
+
+def test_an_installed_package_and_its_checkout_are_one(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The entry points of the project as an installer writes them, beside those built in."""
+    project = tomllib.loads((Path(__file__).parents[1] / "pyproject.toml").read_text())
+    written = "".join(
+        f"[{group}]\n" + "".join(f"{name} = {target}\n" for name, target in points.items())
+        for group, points in project["project"]["entry-points"].items()
+    )
+    info = tmp_path / "evenarm-9.9.dist-info"
+    info.mkdir()
+    (info / "METADATA").write_text("Metadata-Version: 2.1\nName: evenarm\nVersion: 9.9\n")
+    (info / "entry_points.txt").write_text(written)
+    monkeypatch.syspath_prepend(str(tmp_path))
+    available.cache_clear()
+    try:
+        rows = [(row.kind, row.name, row.target) for row in available()]
+        assert sorted(rows) == sorted(BUILT_IN)
+        for kind, name, _ in BUILT_IN:
+            assert load(kind, name).kind == kind
+    finally:
+        available.cache_clear()
 
 
 def test_unknown_names() -> None:
