@@ -122,7 +122,7 @@ def test_scan_times():
 
 @pytest.mark.parametrize(
     ("settle_s", "lag_s", "wait_s"),
-    [(0.05, 0.0, 0.05), (0.05, 0.3, 0.3), (0.0, 0.3, 0.3), (0.05, -0.3, 0.05)],
+    [(0.05, 0.0, 0.05), (0.05, 0.3, 0.35), (0.0, 0.3, 0.3), (0.05, -0.3, 0.05)],
 )
 def test_a_step_waits_for_the_detector_as_well(settle_s, lag_s, wait_s):
     facts = replace(FACTS, settle_s=settle_s, lag_s=lag_s)
