@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any, TypeVar, cast
@@ -22,27 +23,25 @@ from drivers.contracts import (
     SourceChanger,
     Stage,
 )
-from drivers.registry import load
+from drivers.registry import LoadFailure, declared
 
 from .ports import Port
 
-__all__ = ["Devices", "as_fault", "declared", "open_devices", "parse_pace"]
+__all__ = ["Devices", "as_fault", "open_devices", "parse_pace"]
 
 OPEN_TIMEOUT_S = 10.0
+_MEND_PORT = "check its cable and power, and that no other program uses its port"
+_PROTOCOLS: dict[Kind, type] = {
+    "stage": Stage,
+    "detector": Detector,
+    "changer": SourceChanger,
+}
 DeviceT = TypeVar("DeviceT", bound=Device)
 
 
 def as_fault(error: DeviceError) -> BenchFault:
     """A device's error as one that a person can act on."""
     return BenchFault(error.what, where=error.device or "a device", mend=error.mend)
-
-
-def declared(kind: str, name: str) -> Driver | None:
-    """The driver called ``name``, or None where there is none; what bench.spec asks for."""
-    try:
-        return load(cast(Kind, kind), name)
-    except LookupError:
-        return None
 
 
 def parse_pace(text: str) -> float | None:
@@ -122,25 +121,35 @@ def open_devices(spec: BenchSpec, *, pace: float | None = None) -> Devices:
     ports: dict[Kind, Port[Any]] = {}
     try:
         for kind, (_, settings) in wanted.items():
-            ports[kind] = Port(kind, drivers[kind].open(settings, context))
-    except DeviceError as error:
-        for port in ports.values():
+            ports[kind] = _opened(drivers[kind], settings, context)
+        # Only a simulated bench has a hand and a truth of its own, whatever else a driver calls so.
+        hidden = ports["detector"].device if drivers["detector"].simulated else None
+        return Devices(
+            stage=ports["stage"],
+            detector=ports["detector"],
+            changer=ports.get("changer"),
+            clock=clock,
+            simulated=simulated,
+            select_by_simulated_hand=getattr(hidden, "operator_selects", None),
+            residual_opd_m=getattr(getattr(hidden, "world", None), "residual_opd_m", None),
+        )
+    except BaseException:  # an interrupt too must leave no port open
+        for port in reversed(ports.values()):
             port.close()
-        raise as_fault(error) from None
-    detector = ports["detector"].device
-    return Devices(
-        stage=ports["stage"],
-        detector=ports["detector"],
-        changer=ports.get("changer"),
-        clock=clock,
-        simulated=simulated,
-        select_by_simulated_hand=getattr(detector, "operator_selects", None),
-        residual_opd_m=detector.world.residual_opd_m if hasattr(detector, "world") else None,
-    )
+        raise
 
 
 def _driver(kind: Kind, name: str) -> Driver:
-    driver = declared(kind, name)
+    try:
+        driver = declared(kind, name)
+    except LoadFailure as failure:
+        plugin = failure.plugin
+        raise UsageError(
+            f"the {kind} driver {printable(name)!r} cannot be used",
+            where=f"{plugin.target}, from {plugin.source}",
+            why=failure.why,
+            mend="repair or uninstall it; `evenarm drivers --load` tries every one",
+        ) from failure
     if driver is None:
         raise UsageError(
             f"there is no {kind} driver called {printable(name)!r}",
@@ -148,3 +157,57 @@ def _driver(kind: Kind, name: str) -> Driver:
             mend="`evenarm drivers` lists what can be plugged in",
         )
     return driver
+
+
+def _opened(driver: Driver, settings: Mapping[str, Any], context: Context) -> Port[Any]:
+    """The device behind its port. Raises BenchFault, whatever the driver itself raises."""
+    what = f"the {driver.kind} cannot be opened"
+    where = f"[{driver.kind}] driver {driver.name!r}"
+    try:
+        device: object = driver.open(settings, context)
+        missing = [name for name in _members(driver.kind) if not hasattr(device, name)]
+    except DeviceError as error:
+        where = f"{where}: {error.device}" if error.device else where
+        raise BenchFault(error.what, where=where, mend=error.mend or _MEND_PORT) from error
+    except OSError as error:
+        parts = (str(error.filename or ""), error.strerror or str(error) or type(error).__name__)
+        raise BenchFault(
+            what,
+            where=where,
+            why=": ".join(part for part in parts if part),
+            mend=_mend_of(error, driver.kind),
+        ) from error
+    except (Exception, SystemExit) as error:  # a plug-in may raise anything
+        raise BenchFault(
+            what,
+            where=where,
+            why=f"the driver itself failed: {type(error).__name__}: {error}",
+            mend=f"check [{driver.kind}.settings]; if they are right, tell who wrote the driver",
+        ) from error
+    try:
+        if missing:
+            raise BenchFault(
+                what,
+                where=where,
+                why=f"the driver opened a {type(device).__name__}, which is no {driver.kind}: "
+                f"it has no {', '.join(missing)}",
+                mend="tell who wrote the driver",
+            )
+        return Port(driver.kind, cast(Device, device))
+    except BaseException:
+        with contextlib.suppress(Exception):
+            cast(Device, device).close()
+        raise
+
+
+def _members(kind: Kind) -> list[str]:
+    """What a device must have. Looked up by name, because drivers may forward to what they wrap."""
+    return [name for name in dir(_PROTOCOLS[kind]) if not name.startswith("_")]
+
+
+def _mend_of(error: OSError, kind: Kind) -> str:
+    if isinstance(error, PermissionError):
+        return "let this user use the port: on Linux, join the group that owns it and log in again"
+    if isinstance(error, FileNotFoundError):
+        return f"plug it in and switch it on, or correct its port in [{kind}.settings]"
+    return _MEND_PORT
