@@ -106,6 +106,12 @@ def test_an_uncertainty_that_cannot_be_is_refused(u_nm):
             verdict(*pair, left_nm=0.0)
 
 
+def test_a_common_part_that_cannot_be_is_refused():
+    bad = dataclasses.replace(zero("b", 0.0), common_u_m=-1e-9)
+    with pytest.raises(ValueError, match="'b': its common part"):
+        combine(zero("a", 0.0), bad)
+
+
 def judged(**changed):
     """The verdict of a run that would be accepted, with some of its numbers changed."""
     given = {
@@ -126,8 +132,8 @@ spoilt = st.sampled_from([math.nan, math.inf, -math.inf])
 
 
 @given(
-    whose=st.sampled_from(["zero_m", "u_m", "time_s", "opd_per_m", "resolution_m", "left_at_m",
-                           "left_at_s", "coverage_factor"]),
+    whose=st.sampled_from(["zero_m", "u_m", "time_s", "common_u_m", "opd_per_m", "resolution_m",
+                           "left_at_m", "left_at_s", "coverage_factor"]),
     which=st.sampled_from(["first", "second"]),
     value=spoilt,
 )  # fmt: skip

@@ -55,9 +55,12 @@ def combine(first: ZeroFound, second: ZeroFound) -> ZeroFound:
     Raises ValueError for a value that is not finite or an uncertainty that is not positive.
     """
     for found in (first, second):
-        _refuse_not_finite(f"the scan {found.scan!r}", found.zero_m, found.u_m, found.time_s)
+        whose = f"the scan {found.scan!r}"
+        _refuse_not_finite(whose, found.zero_m, found.u_m, found.time_s, found.common_u_m)
         if not found.u_m > 0.0:
-            raise ValueError(f"the scan {found.scan!r}: uncertainty {found.u_m} m is not positive")
+            raise ValueError(f"{whose}: uncertainty {found.u_m} m is not positive")
+        if not found.common_u_m >= 0.0:
+            raise ValueError(f"{whose}: its common part {found.common_u_m} m is negative")
     # Written with ratios, because squares of the uncertainties can overflow or vanish.
     own_1_m, own_2_m = first.own_u_m, second.own_u_m
     common_u_m = max(first.common_u_m, second.common_u_m)
