@@ -108,7 +108,7 @@ class World:
 
     def located(self, name: str) -> said.Input:
         leg = self.state.leg
-        low, high = sorted((leg.start_m, leg.stop_m))
+        low, high = self.state.pending.body["read_m"]
         if name in self.blind or not low <= self.zero_m <= high:
             return said.LocateEnded({"found": False, "reason": "plain noise"}, self.time_s)
         u_m = 1e-6 if leg.purpose == "search" else 4e-9
@@ -313,14 +313,25 @@ def test_a_zero_that_cannot_be_approached_from_its_side_is_rejected():
     assert state.left_at_m is None
 
 
+def test_a_scan_that_can_read_nothing_more_is_not_made_for_ever():
+    facts = dataclasses.replace(FACTS, travel_m=(0.0, 14e-3))
+    world = World(setup(facts=facts, prior=Belief.uniform(13.9e-3, 0.1e-3)), zero_m=13.9999e-3)
+    world.read = lambda body: (body["start_m"], min(body["stop_m"], 13.999e-3))
+    world.begin()
+    state = world.run()
+    assert state.outcome == "not found"
+    assert state.scans_run < 20
+
+
 def test_what_was_not_read_is_not_believed_to_be_empty():
     world = World(setup(), zero_m=20e-3)
     world.read = lambda body: (body["start_m"], body["start_m"] + 1e-7)
     world.begin()
-    while world.state.legs_run < 3:
+    while world.state.scans_run < 1 or world.state.pending is not None:
         world.feed(world.answer())
     low, high = world.state.belief.interval(0.95)
     assert high - low > 9e-3
+    assert world.run().outcome == "not found"
 
 
 def test_a_stop_does_not_make_an_unknown_position_known():

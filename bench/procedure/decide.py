@@ -256,7 +256,18 @@ def _search(setup: Setup, state: RunState) -> tuple[Event, ...]:
     leg = plan.legs[0]
     if leg.purpose != "search":
         return (Event("step-done", {}),)
+    if state.last_leg is not None and _where_and_how(leg) == _where_and_how(state.last_leg):
+        return _not_found(
+            setup,
+            state,
+            "the same scan would be made again; the zero may lie where no scan can read, so near "
+            "an end of the travel that the stage does not reach its speed there",
+        )
     return (_chosen(leg, plan.expected_time_s),)
+
+
+def _where_and_how(leg: Leg) -> tuple[object, ...]:
+    return (leg.source, leg.start_m, leg.stop_m, leg.speed_m_s, leg.increment_m)
 
 
 def _not_found(setup: Setup, state: RunState, reason: str) -> tuple[Event, ...]:

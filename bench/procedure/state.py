@@ -72,6 +72,7 @@ class RunState:
     position_known: bool = False
     at: str = ""  # the role of the last position reached, such as "run-up" or "zero"
     leg: Leg | None = None
+    last_leg: Leg | None = None
     legs_run: int = 0
     went_back: int = 0
     scans_run: int = 0
@@ -194,7 +195,8 @@ def _scan_done(_setup: Setup, state: RunState, body: Body) -> RunState:
 
 
 def _leg_chosen(_setup: Setup, state: RunState, body: Body) -> RunState:
-    return replace(state, leg=Leg(**body["leg"]), legs_run=state.legs_run + 1, at="")
+    leg = Leg(**body["leg"])
+    return replace(state, leg=leg, last_leg=leg, legs_run=state.legs_run + 1, at="")
 
 
 def _located(setup: Setup, state: RunState, body: Body) -> RunState:
