@@ -15,6 +15,7 @@ from bench.fringes.model import FloatArray
 
 SPEED_OF_LIGHT_M_S = 299792458.0
 TWO_PI = 2.0 * np.pi
+VISIBLE_M = (400e-9, 950e-9)
 
 
 @dataclass(frozen=True)
@@ -23,12 +24,14 @@ class Dispersion:
 
     One unit of bend is about half a radian at the spectrum's rms half-width. ``fs2_per_bend`` and
     ``m_per_bend`` (of ``material``) are None where the scan's axis has no known length.
+    ``beyond`` is the part of ``curve`` above second order where the glass is only assumed.
     """
 
     curve: Callable[[FloatArray], FloatArray]
     material: str | None = None
     m_per_bend: float | None = None
     fs2_per_bend: float | None = None
+    beyond: Callable[[FloatArray], FloatArray] | None = None
 
 
 def second_order(reference: float, scale: float, per_m: float | None) -> Dispersion:
@@ -44,6 +47,24 @@ def second_order(reference: float, scale: float, per_m: float | None) -> Dispers
         return Dispersion(curve)
     per_omega = per_m / (TWO_PI * SPEED_OF_LIGHT_M_S) / scale
     return Dispersion(curve, fs2_per_bend=per_omega**2 * 1e30)
+
+
+def some_glass(reference: float, scale: float, per_m: float) -> Dispersion:
+    """Where no material is named: a crown glass in the visible, second order elsewhere.
+
+    The third order of common optical glasses is 0.4 to 0.6 fs times their second in the visible, so
+    any of them says more of the phase than second order alone; ``beyond`` tells how much more.
+    """
+    wavelength_m = per_m / reference
+    if not VISIBLE_M[0] < wavelength_m < VISIBLE_M[1]:
+        return second_order(reference, scale, per_m)
+    known = of_glass("N-BK7", reference, scale, per_m)
+    plain = second_order(reference, scale, per_m)
+
+    def beyond(frequency: FloatArray) -> FloatArray:
+        return np.asarray(known.curve(frequency) - plain.curve(frequency), dtype=np.float64)
+
+    return Dispersion(known.curve, fs2_per_bend=known.fs2_per_bend, beyond=beyond)
 
 
 def of_glass(material: str, reference: float, scale: float, per_m: float) -> Dispersion:

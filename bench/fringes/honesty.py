@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from bench.fringes.model import FloatArray
+from bench.fringes.model import BoolArray, FloatArray
 from bench.fringes.zero import PacketFit
 
 
@@ -68,6 +68,21 @@ def noise_shares(
         position=float(np.sqrt(shares[1])),
         light=float(np.sqrt(shares[2])),
     )
+
+
+def wild_readings(residual: FloatArray, limit: float = 6.0) -> BoolArray:
+    """Residuals far beyond the usual size of their neighbours, in the order of position.
+
+    Only where there are enough readings for a usual size in stretches shorter than a packet.
+    """
+    n, size = residual.size, 24
+    if n < 8 * size:
+        return np.zeros(n, dtype=bool)
+    blocks = np.pad(np.abs(residual), (0, -n % size), mode="reflect").reshape(-1, size)
+    usual = np.pad(1.4826 * np.median(blocks, axis=1), 1, mode="edge")
+    usual = np.maximum(usual[1:-1], np.maximum(usual[:-2], usual[2:]))
+    floor = 0.1 * float(np.mean(usual))
+    return np.asarray(np.abs(residual) > limit * np.repeat(np.maximum(usual, floor), size)[:n])
 
 
 def covariance(fit: PacketFit, variance: FloatArray) -> FloatArray:

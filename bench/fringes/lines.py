@@ -11,11 +11,14 @@ import math
 import numpy as np
 
 from bench.fringes.model import BoolArray, FloatArray
+from bench.fringes.spectrum import polynomial
 
 MOST_LINES = 4
 LEAST_OUTSIDE = 120
 POWER_OVER_MEDIAN = 25.0
 STEADY = 0.35
+LEAST_CYCLES = 6  # in a scan: slower is drift
+SMOOTH_ORDER = 8
 
 
 def remove_lines(
@@ -40,13 +43,14 @@ def remove_lines(
         return found
     count = 1 << math.ceil(math.log2(2 * n))
     cell = np.minimum(np.round((u - u[0]) / usual).astype(np.int64), count - 1)
+    flat = flat - _smooth(u, flat, outside)
     rest = np.where(outside, flat, 0.0)
     kept = _bins_of(spare, count, usual, n)
     for _ in range(MOST_LINES):
         filled = np.bincount(cell, rest, minlength=count)[:count]
         power = np.abs(np.fft.rfft(filled)) ** 2
         usual_power = float(np.median(power))
-        power[: max(4, count // n * 3)] = 0.0
+        power[: LEAST_CYCLES * count // n] = 0.0
         power[kept[: power.size]] = 0.0
         top = int(np.argmax(power))
         if power[top] <= POWER_OVER_MEDIAN * usual_power or top == 0 or top >= power.size - 1:
@@ -61,6 +65,15 @@ def remove_lines(
         found += line
         rest = np.where(outside, flat - found, 0.0)
     return found
+
+
+def _smooth(u: FloatArray, flat: FloatArray, outside: BoolArray) -> FloatArray:
+    """What is left of the slow level: a polynomial through the readings outside the packet."""
+    columns = polynomial(u, SMOOTH_ORDER)
+    part = columns[outside]
+    gram = part.T @ part
+    gram += 1e-9 * float(np.trace(gram)) * np.eye(gram.shape[0])
+    return np.asarray(columns @ np.linalg.solve(gram, part.T @ flat[outside]), dtype=np.float64)
 
 
 def _bins_of(band: tuple[float, float] | None, count: int, step: float, readings: int) -> BoolArray:

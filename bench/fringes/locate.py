@@ -30,10 +30,14 @@ from bench.fringes.results import Solution
 from bench.fringes.solve import solve
 from bench.fringes.trend import flat_tops, lone_spikes, robust_spread, slow_level
 from bench.fringes.verdict import EVERYWHERE, LINE, judge
-from bench.fringes.window import Window, settle
+from bench.fringes.window import LEAST_CLEAR, Window, clear_margin, settle
 
 LEAST_READINGS = 24
 DROWNED = 0.3  # of a steady line
+IN_STEP = (
+    "the readings fall in step with the fringes, which fold onto themselves: "
+    "scan again with another spacing of the readings"
+)
 SUSPICION = 0.2
 SEEN = 1.8  # what the verdict asks beyond the search, by simulation: nine in ten are found
 
@@ -65,6 +69,9 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     if candidate.amplitude < DROWNED * math.sqrt(2.0) * float(np.std(steady)):
         # what taking out a far stronger line leaves behind is not trusted to be a packet
         candidate = replace(candidate, steady=True)
+    if band is not None and clear_margin(u, candidate) < LEAST_CLEAR:
+        notices.append(Notice("undersampled", IN_STEP))
+        return _refused(IN_STEP, 1.0, notices, flat)
     window = None
     if not candidate.steady:
         window = settle(u, flat, candidate, band_known=band is not None)
@@ -167,9 +174,13 @@ def _result(
         at = mean_wavelength
         if known.at_wavelength_m is not None:
             at = Estimate(known.at_wavelength_m, 0.0)
+    on_axis = _on_axis(zero, fit.origin, middle, span)
+    if stated and known.at_wavelength_m is not None and scan.opd_per_x is not None:
+        share = results.scale_share(glass, known.at_wavelength_m, relative, scan.opd_per_x)
+        on_axis = Estimate(on_axis.value, math.hypot(on_axis.standard_uncertainty, share))
     return Located(
         found=True,
-        zero=_on_axis(zero, fit.origin, middle, span),
+        zero=on_axis,
         at_wavelength_m=at,
         fringe_zero=None
         if fringe is None

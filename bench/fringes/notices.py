@@ -9,6 +9,7 @@ import numpy as np
 from bench.fringes.detect import search_band
 from bench.fringes.model import Estimate, FloatArray, Notice
 from bench.fringes.results import Solution
+from bench.fringes.verdict import carried_by_few
 from bench.fringes.window import Window
 from bench.fringes.zero import PacketFit
 
@@ -28,6 +29,10 @@ def at_the_edge(
     """
     place = fit.origin + zero.value
     width = window.width
+    astray = abs(place - window.sought)
+    if astray > width:
+        # the fit and the search saw different things: neither is trusted to better than that
+        zero = Estimate(zero.value, math.hypot(zero.standard_uncertainty, astray))
     near = min(window.peak - float(u[0]), float(u[-1]) - window.peak) / width
     if near > NEAR_END:
         return zero, []
@@ -96,6 +101,7 @@ def _second_packet(
         )
         seen = search_band(x, y - smooth, low, high)
         inner = min(abs(seen.x - u[window.first]), abs(seen.x - u[window.stop - 1]))
-        if seen.false_alarm < 1e-3 and inner > window.width:
+        spiky = carried_by_few(x, y - smooth, seen.x, seen.width)
+        if seen.false_alarm < 1e-3 and inner > window.width and not spiky:
             best = max(best or 0.0, seen.amplitude)
     return best

@@ -7,8 +7,8 @@ from dataclasses import replace
 
 import numpy as np
 
-from bench.fringes.dispersion import Dispersion, of_glass, second_order
-from bench.fringes.honesty import covariance, noise_shares
+from bench.fringes.dispersion import Dispersion, of_glass, second_order, some_glass
+from bench.fringes.honesty import covariance, noise_shares, wild_readings
 from bench.fringes.measures import FIRST
 from bench.fringes.model import FloatArray, Knowledge
 from bench.fringes.results import Solution
@@ -18,6 +18,7 @@ from bench.fringes.zero import LinearFit, PacketFit, fit_linear, fit_packet
 
 CUT_BEND_PRIOR = 1.0  # half a packet cannot tell dispersion from a shift
 BEND_PRIOR = 6.0  # standard deviation of a prior on dispersion: 3 rad at the rms half-width
+BENDS = np.linspace(-8.0, 8.0, 33)
 NO_BEND = 1e-6
 ROUNDS = 3
 RULER_ROUNDS = 8
@@ -56,23 +57,22 @@ def _dispersion(
 ) -> Dispersion:
     if known.glass is not None and per_m is not None:
         return of_glass(known.glass, reference, scale, per_m)
+    if per_m is not None:
+        return some_glass(reference, scale, per_m)
     return second_order(reference, scale, per_m)
 
 
 def _first_guesses(
-    fit: LinearFit, peak: float, dispersion: Dispersion, reference: float
+    fit: LinearFit, window: Window, dispersion: Dispersion
 ) -> list[tuple[float, float]]:
-    """(shift, bend): from the envelope's maximum, and from the spectrum's phase."""
-    peak = peak - fit.origin
-    guesses = [(peak, 0.0)]
-    turned = fit.c * np.exp(2j * np.pi * fit.frequency * peak)
-    phase = np.unwrap(np.angle(turned))
-    away = fit.frequency - reference
-    columns = np.stack([np.ones_like(away), away, dispersion.curve(fit.frequency)], axis=1)
-    size = np.abs(fit.c)[:, None]
-    solved, *_ = np.linalg.lstsq(columns * size, phase * size[:, 0], rcond=1e-9)
-    guesses.append((peak - float(solved[1]) / (2.0 * math.pi), float(solved[2])))
-    return guesses
+    """(shift, bend): the envelope's maximum, and the highest maximum with dispersion undone."""
+    peak = window.peak - fit.origin
+    places = peak + np.linspace(-1.2, 1.2, 24 * fit.frequency.size) * window.width
+    curve = dispersion.curve(fit.frequency)
+    undone = fit.c[:, None] * np.exp(-1j * np.outer(curve, BENDS))
+    height = np.abs(np.exp(2j * np.pi * np.outer(places, fit.frequency)) @ undone)
+    at, which = np.unravel_index(int(np.argmax(height)), height.shape)
+    return [(peak, 0.0), (float(places[at]), float(BENDS[which]))]
 
 
 def _rounds(
@@ -99,7 +99,7 @@ def _rounds(
     for turn in range(rounds):
         dispersion = _dispersion(known, reference, scale, per_m)
         if turn == 0:
-            guesses = _first_guesses(start, window.peak, dispersion, reference)
+            guesses = _first_guesses(start, window, dispersion)
             if bend_prior <= NO_BEND:
                 guesses = guesses[:1]
         fits = [
@@ -109,14 +109,19 @@ def _rounds(
             for guess in guesses
         ]
         fit = min(fits, key=lambda done: _cost(done, weight))
-        shares = noise_shares(fit.residual, fit.leverage, fit.slope, fit.fringes)
+        wild = wild_readings(fit.residual)
+        tame = ~wild
+        shares = noise_shares(
+            fit.residual[tame], fit.leverage[tame], fit.slope[tame], fit.fringes[tame]
+        )
         variance = shares.variance(fit.slope, fit.fringes)
         variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
-        wild = np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
+        wild |= np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
+        variance = np.where(wild, np.maximum(fit.residual**2, variance), variance)
         solution = Solution(fit, covariance(fit, variance), shares)
         sizes = _expected_sizes(solution)
         used = weight
-        weight = np.where(wild, 1e-6, 1.0) / variance
+        weight = np.where(wild, 1e-4, 1.0) / variance
         weight = weight / float(np.mean(weight))
         guesses = [(fit.shift, fit.bend)]
         mean, _ = solution.mean_frequency()

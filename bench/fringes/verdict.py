@@ -19,9 +19,10 @@ STEP = "the signal jumps there: a step, not a packet"
 SLOW = "the signal wanders there without fringes of its own: no packet"
 LINE = "the fringes there are a line's, not the source's: no packet"
 FEW_PLACES = 10.0
-STRENGTH = 1e-4
-CUT_STRENGTH = 1e-2  # half a packet leaves few readings to compare with
+STRENGTH = 1e-2  # beside the search, whose own false alarms are fewer than ACCEPT
+FEW_READINGS = 3.0
 LONG_WINDOW = 200  # readings
+CLEAR_OF_NOISE = 2.0  # by simulation: most bursts of noise stay below, few packets do
 LONGEST = 3.5
 
 
@@ -64,25 +65,28 @@ def is_step(part: FloatArray, values: FloatArray, residual_energy: float) -> boo
     return left < 0.3 * total or (left < 0.7 * total and left < 1.3 * residual_energy)
 
 
-def carried_by_few(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool:
-    """Whether the energy of the band vanishes with the few largest readings."""
-    count = max(4, part.size // 16)
-    keep = np.ones(part.size, dtype=bool)
-    keep[np.argsort(np.abs(values - fit.level))[-count:]] = False
-    if int(keep.sum()) < 2 * fit.frequency.size + 6:
-        return True
-    again = fit_linear(part[keep], values[keep], fit.origin, fit.frequency, np.ones(keep.sum()))
-    _, chance = strength(values[keep], again)
-    return chance > 0.02
+def carried_by_few(part: FloatArray, values: FloatArray, place: float, width: float) -> bool:
+    """Whether a few readings hold the energy under a packet's envelope.
+
+    Their number is (sum e)^2 / sum e^2 over the readings' energies e: half the readings within the
+    packet's width where fringes fill it, a handful at most for spikes.
+    """
+    kernel = np.exp(-4.0 * np.log(2.0) * ((part - place) / width) ** 2)
+    energy = (values * kernel) ** 2
+    return float(np.sum(energy)) ** 2 < FEW_READINGS * float(np.sum(energy**2))
 
 
-def is_burst(part: FloatArray, values: FloatArray, fit: LinearFit) -> bool:
+def is_burst(part: FloatArray, values: FloatArray, fit: LinearFit, window: Window) -> bool:
     """Whether the band's energy is no more than a stretch of strong noise brings with it.
 
     The noise is taken from short stretches of the residuals, and what is noisy weighs little.
     """
     if part.size < LONG_WINDOW:
-        return False
+        # too few for a profile of the noise: noise that strong leaves most of itself unexplained
+        fringes = values - fit.level - fit.residual
+        near = np.abs(part - window.peak) < 0.6 * window.width
+        left = float(np.sum(fit.residual[near] ** 2))
+        return float(np.sum(fringes[near] ** 2)) < CLEAR_OF_NOISE * left
     size = part.size // 24
     square = np.convolve(fit.residual**2, np.full(size, 1.0 / size), mode="same")
     weight = 1.0 / np.maximum(square, 0.02 * float(np.mean(square)))
@@ -142,8 +146,7 @@ def judge(
         return "too few readings on what may be a packet", candidate.false_alarm
     part, values = u[window.first : window.stop], flat[window.first : window.stop]
     fit = window.fit
-    cut = window.first == 0 or window.stop == u.size
-    if cut:
+    if window.first == 0 or window.stop == u.size:
         # a cut window holds fewer frequencies than the whole one that the fit is made for
         grid = band_grid(
             float(fit.frequency[0]), float(fit.frequency[-1]), float(part[-1] - part[0])
@@ -156,7 +159,7 @@ def judge(
     if alone:
         chance = min(1.0, chance * candidate.places)
     false_alarm = max(chance if alone else 0.0, FLOOR_KNOWN if few else candidate.false_alarm)
-    if chance > (ACCEPT if alone else CUT_STRENGTH if cut else STRENGTH):
+    if chance > (ACCEPT if alone else STRENGTH):
         return NOTHING, false_alarm
     if candidate.false_alarm > ACCEPT and not few:
         return EVERYWHERE, candidate.false_alarm
@@ -168,6 +171,9 @@ def judge(
         return SLOW, 1.0
     if is_step(part, values, float(np.sum(fit.residual**2))):
         return STEP, 1.0
-    if carried_by_few(part, values, fit) or is_burst(part, values, fit):
+    level = values - fit.level
+    if carried_by_few(part, level, window.peak, window.width) or is_burst(
+        part, values, fit, window
+    ):
         return NOTHING, 1.0
     return "", false_alarm

@@ -8,17 +8,22 @@ import numpy as np
 
 from bench.fringes.detect import ENVELOPE_FWHM, Candidate
 from bench.fringes.model import FloatArray
-from bench.fringes.spectrum import band_grid
+from bench.fringes.spectrum import band_grid, fourier_sum
 from bench.fringes.zero import LinearFit, envelope_of, fit_linear
 
+WIDEST = 4.0  # envelopes: more than glass draws a packet out to, and still be seen
 REACH = 2.6  # half a window over the envelope's full width at half maximum
 MOST_UNKNOWNS = 160
+LEAST_CLEAR = 1.2
 MARGINS = (1.25, 0.9, 0.65)  # of the half-power band to either side: where a Gaussian is at 1.3 %
 
 
 @dataclass(frozen=True)
 class Window:
-    """Readings ``first`` to ``stop`` of the sorted scan with the free-spectrum fit of them."""
+    """Readings ``first`` to ``stop`` of the sorted scan with the free-spectrum fit of them.
+
+    ``peak`` and ``width`` are of the fitted envelope, ``sought`` is where the search saw it.
+    """
 
     first: int
     stop: int
@@ -27,6 +32,7 @@ class Window:
     low: float
     high: float
     fit: LinearFit
+    sought: float
 
 
 def full_width(u: FloatArray, envelope: FloatArray) -> tuple[float, float]:
@@ -48,11 +54,33 @@ def full_width(u: FloatArray, envelope: FloatArray) -> tuple[float, float]:
     return place, max(end - start, step)
 
 
+def clear_margin(x: FloatArray, candidate: Candidate) -> float:
+    """How far the band may be widened before it folds onto itself, in half-power widths.
+
+    Readings in step with the fringes cannot tell a frequency f from its mirror: the two meet where
+    the readings' own transform at 2 f is large. Widening is to either side of the band's middle;
+    ``MARGINS[0]`` where nothing folds. Uneven readings do not fold.
+    """
+    middle, size = 0.5 * (candidate.low + candidate.high), candidate.high - candidate.low
+    reach = REACH * ENVELOPE_FWHM / size
+    place = x[(x > candidate.x - reach) & (x < candidate.x + reach)]
+    if place.size < 8:
+        return MARGINS[0]
+    reach = 0.5 * float(place[-1] - place[0])
+    count = int(np.ceil(2.0 * MARGINS[0] * size * 2.0 * reach * 4.0)) + 3
+    away = np.linspace(-MARGINS[0], MARGINS[0], count)
+    double = 2.0 * (middle + away * size)
+    together = np.abs(fourier_sum(place, np.ones(place.size), double)) / place.size
+    folded = np.abs(away[together > 0.6])
+    return float(folded.min()) if folded.size else MARGINS[0]
+
+
 def settle(
     x: FloatArray, signal: FloatArray, candidate: Candidate, *, band_known: bool
 ) -> Window | None:
     """As ``_settle``, with less of the band's wings where the scan's end leaves few readings."""
-    for margin in MARGINS if band_known else MARGINS[:1]:
+    clear = clear_margin(x, candidate) if band_known else MARGINS[0]
+    for margin in (min(clear, wide) for wide in (MARGINS if band_known else MARGINS[:1])):
         window = _settle(x, signal, candidate, margin, band_known=band_known)
         if window is not None:
             return window
@@ -77,7 +105,7 @@ def _settle(
         middle = 0.5 * (candidate.low + candidate.high)
         low, high = _around(middle, 5.0 / width)
     # dispersion only widens: nothing is narrower than the band allows
-    narrowest = 0.95 * width if band_known else 0.0
+    narrowest, widest = (0.95 * width, WIDEST * width) if band_known else (0.0, span)
     centre = candidate.x
     result: Window | None = None
     for turn in range(5):
@@ -94,16 +122,16 @@ def _settle(
         part = x[first:stop]
         fit = fit_linear(part, signal[first:stop], centre, frequency, np.ones(stop - first))
         left, right = float(part[0]) - centre, float(part[-1]) - centre
-        if first == 0 or stop == x.size:
-            # what a cut packet leaves undetermined can ring anywhere: stay with the correlation
+        if band_known or first == 0 or stop == x.size:
+            # what the readings leave undetermined can ring anywhere: stay with the correlation
             left = max(left, candidate.x - centre - 1.2 * width)
             right = min(right, candidate.x - centre + 1.2 * width)
         if right - left < 0.2 * width:
             return result
         fine = np.linspace(left, right, 8 * frequency.size + 1)
         peak, seen = full_width(fine, np.abs(envelope_of(fit, fine)))
-        seen = max(seen, narrowest)
-        result = Window(first, stop, centre + peak, seen, low, high, fit)
+        seen = min(max(seen, narrowest), widest)
+        result = Window(first, stop, centre + peak, seen, low, high, fit, candidate.x)
         moved = abs(peak) > 0.25 * seen
         resized = not 0.7 < seen / width < 1.4
         if not band_known:
