@@ -196,6 +196,7 @@ def test_check_without_limits_fails_and_is_no_input_error(folder: Path) -> None:
         ('dark = "0.02 V"', "", "no dark"),
         ('range = ["0 V", "5 V"]', "", "no range"),
         ('signal = "1 V"', 'signal = "3 V"', "do not fit"),
+        ('reversal_allowance = "20 um"', 'reversal_allowance = "0 um"', "straight into the zero"),
         ("[expect]", "[records]\n[later]", ""),
     ],
 )

@@ -15,7 +15,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from bench.errors import EvenarmError, InputError, Problem, SpecError
+from bench.planning.legs import FINAL_ROOM
 from bench.spec import load_bench
+from bench.spec.checks import SCAN_PACKETS
 from bench.spec.schema import TABLES
 from drivers import registry
 
@@ -326,3 +328,64 @@ def test_any_tree_of_tables_is_read_or_refused(tree: dict[str, Any]) -> None:
         patch.setattr(module, "read_toml", given_tree)
         with contextlib.suppress(EvenarmError):
             load_bench(Path("bench.toml"), declared=registry.declared)
+
+
+def with_stage(*lines: str) -> str:
+    return SMALL.replace('speed = "1 mm/s"', "\n".join(('speed = "1 mm/s"', *lines)))
+
+
+# Six widths of the packet of a Gaussian of 600 nm and 60 nm, from its coherence length by the
+# closed form 4 ln 2 / pi l1 l2 / (l2 - l1) with l = 570 nm and 630 nm (Goodman, Statistical Optics,
+# 5.1), at two lengths of OPD for one of reading: 15.8 um.
+SIX_PACKETS_M = 6 * 0.882542 * 570e-9 * 630e-9 / 60e-9 / 2
+
+
+@pytest.mark.parametrize("allowance_m", [0.0, 5e-6, 20e-6, 1e-3])
+def test_a_longest_move_into_which_no_scan_fits(tmp_path: Path, allowance_m: float) -> None:
+    least_m = allowance_m + SIX_PACKETS_M
+    allowance = f'reversal_allowance = "{allowance_m * 1e6:.6f} um"'
+    short, enough = (f'longest_move = "{least_m * part * 1e6:.6f} um"' for part in (0.99, 1.01))
+    (problem,) = problems(tmp_path, with_stage(allowance, short))
+    assert problem.path == "stage.longest_move"
+    assert problem.value.strip('"') in short
+    assert "no scan fits: must be at least" in problem.allowed
+    load(tmp_path, with_stage(allowance, enough))
+
+
+def test_the_shortest_packet_counts(tmp_path: Path) -> None:
+    narrow = """
+[[source]]
+name = "narrow"
+spectrum = { shape = "gaussian", centre = "600 nm", fwhm = "1 nm" }
+signal = "1 V"
+"""
+    move = 'longest_move = "60 um"'
+    load(tmp_path, with_stage(move) + narrow)
+    alone = with_stage(move).replace('fwhm = "60 nm"', 'fwhm = "1 nm"')
+    (problem,) = problems(tmp_path, alone)
+    assert problem.path == "stage.longest_move"
+
+
+@pytest.mark.parametrize(
+    ("old", "new"),
+    [
+        ('"25 mm"]', '"30 um"]'),  # the travel is what is short, and a stage may have no play
+        ('fwhm = "60 nm"', 'fwhm = "1 MHz"'),  # a laser alone: no packet fits into the travel
+    ],
+)
+def test_what_the_travel_does_not_allow_is_left_to_the_plan(
+    tmp_path: Path, old: str, new: str
+) -> None:
+    assert old in SMALL
+    load(tmp_path, SMALL.replace(old, new))
+
+
+def test_no_packet_is_measured_with_a_path_factor_that_cannot_be(tmp_path: Path) -> None:
+    text = with_stage('longest_move = "25 um"', 'reversal_allowance = "0 um"')
+    load(tmp_path, text)
+    found = problems(tmp_path, text.replace("path_factor = 2", "path_factor = 0"))
+    assert [problem.path for problem in found] == ["bench.path_factor"]
+
+
+def test_the_plan_draws_scans_of_the_length_that_is_asked_for() -> None:
+    assert 2 * FINAL_ROOM == SCAN_PACKETS

@@ -81,6 +81,10 @@ def warnings(spec: BenchSpec) -> list[str]:
             )
     if spec.safety_contact is None:
         found.append("[bench] has no safety_contact: nobody is named with the cautions")
+    if spec.stage.reversal_allowance_m == 0.0:
+        found.append(
+            "[stage] reversal_allowance is zero: play of the stage goes straight into the zero"
+        )
     if spec.expect is None:
         found.append("there is no [expect]: the zero may be anywhere in the travel")
     if spec.reference_wavelength_m is None:

@@ -7,11 +7,16 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from bench.quantities import DIMENSIONS, dimension_of, show, show_length
+from bench.spec.build import longest_move_m
 from bench.spec.model import SourceSpec
 from bench.spec.problems import Problems, nearest
 
 if TYPE_CHECKING:
     from bench.spec import schema
+
+# Widths of its packet that the shortest scan is long: the packet, its lobes and some plain noise.
+# Common practice, no source; the plan draws its final scans so.
+SCAN_PACKETS = 6.0
 
 # Names that a later form of the file will use; what stands in their place now.
 RESERVED = {
@@ -164,6 +169,35 @@ def stage_and_expect(tables: Mapping[str, Any], raw: Mapping[str, Any], problems
             "expect.zero",
             raw["expect"]["zero"],
             f"{reach} is not within [stage] travel, {limits}",
+        )
+
+
+def longest_move(
+    tables: Mapping[str, Any],
+    raw: Mapping[str, Any],
+    sources: Sequence[SourceSpec | None],
+    path_factor: float,
+    problems: Problems,
+) -> None:
+    """One command has room for the overshoot and for the shortest packet; the rest is the plan's.
+
+    Run-up and run-out are not counted, because a slow scan needs next to none. Where the travel
+    itself is as short, or no packet fits into it, the plan says what cannot be done.
+    """
+    stage: schema.Stage | None = tables.get("stage")
+    unknown = any(problem.path.startswith("bench.") for problem in problems.found)
+    if stage is None or stage.travel is None or unknown or not sources or None in sources:
+        return
+    length_m = min(source.coherence_fwhm_m for source in sources if source is not None)
+    scan_m = SCAN_PACKETS * length_m / abs(path_factor)
+    least_m = stage.reversal_allowance + scan_m
+    longest_m, travel_m = longest_move_m(stage), stage.travel[1] - stage.travel[0]
+    if longest_m < least_m <= travel_m and longest_m < travel_m:
+        problems.add(
+            "stage.longest_move",
+            raw["stage"].get("longest_move", show_length(longest_m)),
+            f"no scan fits: must be at least {show_length(float(f'{least_m:.3g}'))}, for "
+            f"reversal_allowance and {SCAN_PACKETS:g} widths of the shortest packet",
         )
 
 

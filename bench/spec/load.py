@@ -83,6 +83,7 @@ def load_bench(
     unit = checks.signal_unit(tables.get("detector"), rows, problems)
     path_factor = checks.path_factor(tables.get("bench"), raw.get("bench"), problems)
     checks.stage_and_expect(tables, raw, problems)
+    checks.longest_move(tables, raw, sources, path_factor, problems)
     checks.detector(tables.get("detector"), raw, problems)
     glass = checks.glass(tables, sources, problems)
     climate = _climate(tables, problems)
