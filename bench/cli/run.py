@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -16,7 +17,7 @@ from bench.cli.output import (
     quantity,
     report_error,
 )
-from bench.errors import EvenarmError, UsageError
+from bench.errors import EvenarmError, UsageError, printable
 
 if TYPE_CHECKING:
     from bench.procedure.session import RunSession
@@ -58,48 +59,7 @@ def command(
     ] = False,
     as_json: Annotated[bool, typer.Option("--json", help="One JSON document on output.")] = False,
 ) -> None:
-    try:
-        status = perform(
-            procedure,
-            bench=bench,
-            unattended=unattended,
-            acknowledge=acknowledge,
-            operator=operator,
-            seed=seed,
-            pace=pace,
-            reveal=reveal,
-            as_json=as_json,
-        )
-    except EvenarmError as error:
-        raise typer.Exit(report_error(error, as_json=as_json)) from None
-    raise typer.Exit(status)
-
-
-def perform(
-    procedure: str,
-    *,
-    bench: Path | None,
-    unattended: bool,
-    acknowledge: str | None,
-    operator: str | None,
-    seed: int | None,
-    pace: str | None,
-    reveal: bool,
-    as_json: bool,
-) -> int:
-    """Run and report. Raises EvenarmError; returns the exit status."""
-    import sys
-
-    from bench.cli.watch import Watcher, signals_stop
-
-    if not unattended and not sys.stdin.isatty():
-        raise UsageError(
-            "nobody is there to answer",
-            where="standard input",
-            why="it is not a terminal, and this run asks questions",
-            mend="run it in a terminal, or with --unattended on a simulated bench",
-        )
-    session = new_session(
+    asked = Asked(
         procedure,
         bench=bench,
         unattended=unattended,
@@ -108,7 +68,41 @@ def perform(
         seed=seed,
         pace=pace if pace is not None else ("fast" if unattended else "10"),
     )
-    watcher = Watcher(session, ask=not unattended)
+    try:
+        status = perform(asked, reveal=reveal, as_json=as_json)
+    except EvenarmError as error:
+        raise typer.Exit(report_error(error, as_json=as_json)) from None
+    raise typer.Exit(status)
+
+
+@dataclass(frozen=True)
+class Asked:
+    """What a command line asks of a run."""
+
+    procedure: str
+    bench: Path | None
+    seed: int | None
+    pace: str
+    unattended: bool = False
+    acknowledge: str | None = None
+    operator: str | None = None
+
+
+def perform(asked: Asked, *, reveal: bool, as_json: bool) -> int:
+    """Run and report. Raises EvenarmError; returns the exit status."""
+    import sys
+
+    from bench.cli.watch import Watcher, signals_stop
+
+    if not asked.unattended and not sys.stdin.isatty():
+        raise UsageError(
+            "nobody is there to answer",
+            where="standard input",
+            why="it is not a terminal, and this run asks questions",
+            mend="run it in a terminal, or with --unattended on a simulated bench",
+        )
+    session = new_session(asked)
+    watcher = Watcher(session, ask=not asked.unattended)
     with signals_stop(session):
         try:
             watcher.follow()
@@ -121,51 +115,51 @@ def perform(
     return EXIT_BY_OUTCOME.get(state.outcome or "fault", EXIT_DEVICE)
 
 
-def new_session(
-    procedure: str,
-    *,
-    bench: Path | None,
-    unattended: bool,
-    acknowledge: str | None,
-    operator: str | None,
-    seed: int | None,
-    pace: str,
-) -> RunSession:
+def new_session(asked: Asked) -> RunSession:
     """A run that is ready to begin. Raises EvenarmError."""
     import getpass
     import secrets
     from datetime import UTC, datetime
 
     from bench.cli.benchfile import open_bench
-    from bench.errors import printable
     from bench.procedure.devices import parse_pace
     from bench.procedure.session import RunOptions, RunSession
     from bench.procedure.text import find_procedure
 
-    paced = parse_pace(pace)
-    for option, name in (("--acknowledge", acknowledge), ("--operator", operator)):
-        if name is not None and not printable(name).strip():
-            raise UsageError("a name is needed", where=option, mend="give the name of a person")
-    spec = open_bench(bench, seed=seed)
-    found = find_procedure(procedure, spec.folder)
+    paced = parse_pace(asked.pace)
+    acknowledged_by = _name("--acknowledge", asked.acknowledge)
+    operator = _name("--operator", asked.operator)
+    spec = open_bench(asked.bench, seed=asked.seed)
+    found = find_procedure(asked.procedure, spec.folder)
     if operator is None:
         try:
             operator = getpass.getuser()
         except (KeyError, OSError):
             operator = "unknown"
+    options = RunOptions(
+        operator=printable(operator, 80),
+        unattended=asked.unattended,
+        acknowledged_by=acknowledged_by,
+        pace=paced,
+    )
     started = datetime.now(UTC)
     return RunSession(
         spec,
         found,
-        RunOptions(
-            operator=printable(operator, 80).strip() or "unknown",
-            unattended=unattended,
-            acknowledged_by=printable(acknowledge, 80).strip() if acknowledge is not None else None,
-            pace=paced,
-        ),
+        options,
         now=lambda: datetime.now(UTC),
         run_id=f"{started:%Y%m%d-%H%M%S}-{secrets.token_hex(2)}",
     )
+
+
+def _name(option: str, text: str | None) -> str | None:
+    """A person's name, without control characters. Raises UsageError for a blank one."""
+    if text is None:
+        return None
+    name = printable(text, 80).strip()
+    if not name:
+        raise UsageError("a name is needed", where=option, mend="give the name of a person")
+    return name
 
 
 def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool) -> None:

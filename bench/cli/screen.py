@@ -18,17 +18,9 @@ def open_screen(*, bench: Path | None, seed: int | None, pace: str) -> int:
         from bench.tui.run import require_terminal, run_app
 
         require_terminal()
-        from bench.cli.run import new_session
+        from bench.cli.run import Asked, new_session
 
-        session = new_session(
-            MAIN_JOB,
-            bench=bench,
-            unattended=False,
-            acknowledge=None,
-            operator=None,
-            seed=seed,
-            pace=pace,
-        )
+        session = new_session(Asked(MAIN_JOB, bench=bench, seed=seed, pace=pace))
         return run_app(session)
     except EvenarmError as error:
         return report_error(error, as_json=False)

@@ -47,9 +47,9 @@ def findings(
         "false_alarm_probability": located.false_alarm_probability,
         "notices": [{"code": n.code, "message": n.message} for n in located.notices],
     }
-    cut = _cut(spec, readings, located)
-    if cut:
-        body |= {"found": False, "reason": cut}
+    unusable = _unusable(spec, readings, located)
+    if unusable:
+        body |= {"found": False, "reason": unusable}
     if not body["found"] or located.zero is None:
         body["weakest_contrast"] = located.weakest_contrast
         return body
@@ -81,10 +81,13 @@ def findings(
     return body
 
 
-def _cut(spec: BenchSpec, readings: Readings, located: Located) -> str:
-    """Why a zero found is not one to drive to: it lies where the scan saw half a packet or none."""
+def _unusable(spec: BenchSpec, readings: Readings, located: Located) -> str:
+    """Why a zero found is not one to drive to, such as one where the scan saw half a packet."""
     if not located.found or located.zero is None:
         return ""
+    u_m = located.zero.standard_uncertainty
+    if not (math.isfinite(located.zero.value) and math.isfinite(u_m) and u_m > 0.0):
+        return "a packet is there, but nothing can be said of how sure its place is"
     room_m = 0.0
     if located.coherence is not None and located.coherence.packet_width_m is not None:
         room_m = located.coherence.packet_width_m.value / abs(spec.opd_per_m) / 2.0
