@@ -22,8 +22,8 @@ from bench.fringes.spectrum import demodulate
 LOG2 = float(np.log(2.0))
 ENVELOPE_FWHM = 4.0 * LOG2 / np.pi  # of a Gaussian packet times its half-power band: 0.8825
 
-# What white noise supports: with a known band 1 scan of 15 000 was said to hold a packet, without one
-# none of 3 000. The upper 95 % limits of these rates are the least that is ever claimed.
+# What white noise supports: with a known band 1 scan of 15 000 was said to hold a packet, without
+# one none of 3 000. The upper 95 % limits of these rates are the least that is ever claimed.
 FLOOR_KNOWN = 5e-4
 FLOOR_BLIND = 1e-3
 ACCEPT = 1e-3

@@ -22,8 +22,9 @@ FEW_PLACES = 10.0
 STRENGTH = 1e-2  # beside the search, whose own false alarms are fewer than ACCEPT
 FEW_READINGS = 3.0
 LONG_WINDOW = 200  # readings
-CLEAR_OF_NOISE = 2.0  # by simulation: most bursts of noise stay below, few packets do
+CLEAR_OF_NOISE = 1.5  # by simulation: most bursts of noise stay below, few packets do
 LONGEST = 3.5
+FLATTEST = 0.55  # rms of the band analysed evenly: 0.72; of any source within its band: 0.5
 
 
 def f_tail(ratio: float, above: float, below: float) -> float:
@@ -118,6 +119,16 @@ def is_line(fit: LinearFit, candidate: Candidate, width: float) -> bool:
     return rms < 0.12 * size or width > LONGEST * ENVELOPE_FWHM / size
 
 
+def is_flat(fit: LinearFit, candidate: Candidate) -> bool:
+    """Whether the energy fills the analysed band evenly, as noise does, not as the source does."""
+    noise = 4.0 * float(np.sum(fit.residual**2)) / max(1, fit.freedom) / max(1, fit.residual.size)
+    power = np.maximum(np.abs(fit.c) ** 2 - noise, 0.0)
+    total = max(float(np.sum(power)), 1e-300)
+    mean = float(np.sum(power * fit.frequency)) / total
+    rms = float(np.sqrt(np.sum(power * (fit.frequency - mean) ** 2) / total))
+    return rms > FLATTEST * (candidate.high - candidate.low)
+
+
 def is_slow(fit: LinearFit, width: float) -> bool:
     """Whether the spectrum only falls from low frequencies, or holds less than a fringe and a half.
 
@@ -146,7 +157,8 @@ def judge(
         return "too few readings on what may be a packet", candidate.false_alarm
     part, values = u[window.first : window.stop], flat[window.first : window.stop]
     fit = window.fit
-    if window.first == 0 or window.stop == u.size:
+    cut = window.first == 0 or window.stop == u.size
+    if cut:
         # a cut window holds fewer frequencies than the whole one that the fit is made for
         grid = band_grid(
             float(fit.frequency[0]), float(fit.frequency[-1]), float(part[-1] - part[0])
@@ -167,6 +179,8 @@ def judge(
         return EVERYWHERE, 1.0
     if band_known and is_line(fit, candidate, window.width):
         return LINE, 1.0
+    if band_known and not cut and is_flat(fit, candidate):
+        return NOTHING, 1.0
     if not band_known and is_slow(fit, window.width):
         return SLOW, 1.0
     if is_step(part, values, float(np.sum(fit.residual**2))):
