@@ -64,6 +64,16 @@ def test_the_zero_is_found_and_the_stage_left_there(tmp_path, seed):
     assert found.head == run.view().head
 
 
+def test_nobody_is_said_to_have_read_what_nobody_was_asked(tmp_path):
+    folder = bench_folder(tmp_path)
+    for seed, acknowledged_by, by in (
+        (3, None, "nobody: unattended, started by Kim"),
+        (4, "Ada", "Ada"),
+    ):
+        run = session(folder, seed, acknowledged_by=acknowledged_by)
+        assert run.setup.by == by
+
+
 def test_the_same_seed_gives_the_same_readings(tmp_path):
     kept = []
     for name in ("one", "two"):

@@ -87,7 +87,7 @@ class RunSession:
             signal_unit=spec.detector.unit,
             at_wavelength_m=spec.reference_wavelength_m,
             unattended=options.unattended,
-            by=options.acknowledged_by or options.operator,
+            by=_answers(options),
         )
         simulated = spec.simulation is not None
         self._board = Board(self._setup, bench_name=spec.name, simulated=simulated)
@@ -328,6 +328,15 @@ class RunSession:
         residual_m = hidden(at_m)
         zero_m = state.position_m - residual_m / self._setup.facts.opd_per_m
         self.truth = Revealed(zero_m=zero_m, residual_opd_m=residual_m)
+
+
+def _answers(options: RunOptions) -> str:
+    """Who stands behind the answers of a run; nobody's name goes where nobody was asked."""
+    if options.acknowledged_by:
+        return options.acknowledged_by
+    if options.unattended:
+        return f"nobody: unattended, started by {options.operator}"
+    return options.operator
 
 
 def _as_evenarm(error: Exception) -> EvenarmError:
