@@ -18,6 +18,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from bench.fringes import Knowledge, Located, Scan, locate
+from bench.fringes.spectrum import band_grid
+from bench.fringes.verdict import is_step
+from bench.fringes.zero import fit_linear
 
 
 def _load() -> ModuleType:
@@ -353,3 +356,27 @@ def test_strong_dispersion_of_an_unnamed_glass_is_followed() -> None:
     assert located.residual_glass.thickness_m is None
     assert located.residual_glass.dispersion_fs2 is not None
     assert located.residual_glass.dispersion_fs2.value == pytest.approx(1.5 * 68.0, rel=0.05)
+
+
+def test_fringes_far_longer_than_the_source_can_make_are_a_line() -> None:
+    x = np.arange(-40e-6, 40e-6, 20e-9)
+    fade = np.exp(-4.0 * math.log(2.0) * (x / 14e-6) ** 2)  # a packet of this source has 2.7 um
+    signal = 2.0 + fade * np.cos(2.0 * math.pi * 2.0 * x / 600e-9)
+    signal += np.random.default_rng(0).normal(0.0, 0.01, x.size)
+    located = locate(Scan(x, signal, 2.0), Knowledge(band=B.WHITE.band))
+    assert not located.found
+    assert "line" in located.reason
+    assert "monochromatic" in codes(located)
+
+
+@pytest.mark.parametrize("jump", [0.2, 1.0, -1.0])
+def test_a_step_is_told_from_fringes(jump: float) -> None:
+    x = np.arange(-30.0, 30.0)
+    frequency = band_grid(0.25, 0.45, 60.0)
+    even, noise = np.ones(x.size), np.random.default_rng(1).normal(0.0, 0.01, x.size)
+    step = jump * (x > 3.5) + noise
+    left = float(np.sum(fit_linear(x, step, 0.0, frequency, even).residual ** 2))
+    assert is_step(x, step, left)
+    packet = np.exp(-((x / 8.0) ** 2)) * np.cos(2.0 * math.pi * 0.35 * x) + noise
+    left = float(np.sum(fit_linear(x, packet, 0.0, frequency, even).residual ** 2))
+    assert not is_step(x, packet, left)
