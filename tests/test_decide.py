@@ -334,6 +334,17 @@ def test_what_was_not_read_is_not_believed_to_be_empty():
     assert world.run().outcome == "not found"
 
 
+def test_a_scan_that_was_blind_is_no_evidence():
+    world = World(setup())
+    world.begin()
+    while world.state.pending is None or world.state.pending.kind != "locate":
+        world.feed(world.answer())
+    before = world.state.belief
+    world.feed(said.LocateEnded({"found": False, "reason": "in step", "blind": True}, 50.0))
+    assert world.state.belief is before
+    assert world.state.missed == "in step"
+
+
 def test_a_stop_does_not_make_an_unknown_position_known():
     for happened in (
         said.Stopped(5e-3, True, True, "key", 2.0),

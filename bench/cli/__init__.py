@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from pathlib import Path
 from typing import Annotated
@@ -67,6 +68,8 @@ def start(
 
 def main() -> None:
     """Entry point of the ``evenarm`` command."""
+    # Fits here are many and small: threads of the linear algebra only get in each other's way.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     try:
         app()
     except KeyboardInterrupt:

@@ -52,6 +52,8 @@ def findings(
         body |= {"found": False, "reason": unusable}
     if not body["found"] or located.zero is None:
         body["weakest_contrast"] = located.weakest_contrast
+        # Readings in step with the fringes would have shown no packet that is there.
+        body["blind"] = any(notice.code == "undersampled" for notice in located.notices)
         return body
     zero_m = located.zero.value
     body["zero_m"] = zero_m

@@ -205,6 +205,8 @@ def _located(setup: Setup, state: RunState, body: Body) -> RunState:
     assert belief is not None
     state = replace(state, pending=None, leg=None)
     if not body["found"]:
+        if body.get("blind", False):
+            return replace(state, missed=str(body.get("reason", "")))
         low_m, high_m = body["read_m"]  # no evidence of what was not read
         belief = belief.missed(low_m, high_m, leg.detection_probability)
         return replace(state, belief=belief, missed=str(body.get("reason", "")))
