@@ -123,6 +123,6 @@ def test_a_termination_is_a_software_stop(tmp_path):
     output, _ = child.communicate(timeout=60)
     kinds = [line.split()[1] for line in output.splitlines() if line[:1].isdigit()]
     assert kinds[-3:] == ["stop-requested", "stopped", "run-ended"]
-    assert "STOPPED: signal SIGTERM" in output
+    assert "STOPPED: the program was asked to end (SIGTERM)" in output
     # A stop leaves the position known, so the next run needs nobody.
     assert evenarm(folder, "run", "path-equalisation", "--unattended").returncode == 0

@@ -11,7 +11,8 @@ import typer
 
 from bench import __version__
 from bench.cli import check, drivers, fit, new, plan, records, run
-from bench.cli.output import EXIT_STOPPED, note
+from bench.cli.output import EXIT_STOPPED, note, report_error
+from bench.errors import UsageError
 
 __all__ = ["app", "main"]
 
@@ -51,19 +52,32 @@ def start(
         int | None, typer.Option("--seed", help="Seed of a simulated bench's hidden truth.")
     ] = None,
     pace: Annotated[
-        str,
-        typer.Option("--pace", help="Simulated bench time: real, or how many times faster."),
-    ] = "10",
+        str | None,
+        typer.Option(
+            "--pace", help="Simulated bench time: real, or how many times faster; 10 if not said."
+        ),
+    ] = None,
     version: Annotated[
         bool,
         typer.Option("--version", help="Show the version.", callback=_show_version, is_eager=True),
     ] = False,
 ) -> None:
     """Without a command: the terminal UI on this bench folder."""
-    if context.invoked_subcommand is None:
+    given = {"--bench": bench, "--seed": seed, "--pace": pace}
+    command = context.invoked_subcommand
+    if command is not None:
+        for option, value in given.items():
+            if value is not None:
+                error = UsageError(
+                    f"{option} stands before the command",
+                    where=f"evenarm {option} ... {command}",
+                    mend=f"give it after the command: evenarm {command} {option} ...",
+                )
+                raise typer.Exit(report_error(error, as_json=False))
+    else:
         from bench.cli.screen import open_screen
 
-        raise typer.Exit(open_screen(bench=bench, seed=seed, pace=pace))
+        raise typer.Exit(open_screen(bench=bench, seed=seed, pace=pace or "10"))
 
 
 def main() -> None:

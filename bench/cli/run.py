@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -52,7 +53,11 @@ def command(
     ] = None,
     pace: Annotated[
         str | None,
-        typer.Option("--pace", help="Simulated bench time: real, fast, or how many times faster."),
+        typer.Option(
+            "--pace",
+            help="Simulated bench time: real, fast, or how many times faster than real; "
+            "10 with somebody there, fast without.",
+        ),
     ] = None,
     reveal: Annotated[
         bool, typer.Option("--reveal", help="Tell a simulated bench's truth after the run.")
@@ -94,6 +99,7 @@ def perform(asked: Asked, *, reveal: bool, as_json: bool) -> int:
 
     from bench.cli.watch import Watcher, signals_stop
 
+    session = new_session(asked)
     if not asked.unattended and not sys.stdin.isatty():
         raise UsageError(
             "nobody is there to answer",
@@ -101,7 +107,6 @@ def perform(asked: Asked, *, reveal: bool, as_json: bool) -> int:
             why="it is not a terminal, and this run asks questions",
             mend="run it in a terminal, or with --unattended on a simulated bench",
         )
-    session = new_session(asked)
     watcher = Watcher(session, ask=not asked.unattended)
     with signals_stop(session):
         try:
@@ -162,19 +167,24 @@ def _name(option: str, text: str | None) -> str | None:
     return name
 
 
-def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool) -> None:
+def result_document(session: RunSession, state: RunState) -> dict[str, Any]:
+    """The contract's document of a run that has ended."""
     from bench.procedure.results import result_quantities
 
-    view = session.view()
-    document: dict[str, Any] = {
+    return {
         "schema": "evenarm.run/1",
         "run": session.run_id,
         "outcome": state.outcome,
         **result_quantities(session.setup, state),
         "measurements": list(state.measurements),
-        "head": view.head,
+        "head": session.view().head,
         "reason": state.reason,
+        "next": session.view().next_action,
     }
+
+
+def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool) -> None:
+    document = result_document(session, state)
     if reveal:
         truth = session.truth
         document["truth"] = truth and {
@@ -184,20 +194,18 @@ def _report(session: RunSession, state: RunState, *, as_json: bool, reveal: bool
     if as_json:
         emit_json(document)
         return
-    typer.echo("\n".join(_lines(document)))
+    typer.echo("\n".join(result_lines(document)))
 
 
-def _lines(document: dict[str, Any]) -> list[str]:
-    from bench.quantities import show
+def result_lines(document: Mapping[str, Any]) -> list[str]:
+    """The result of a run for people, as it stands after the run in a plain terminal."""
+    from bench.quantities import Quantity, show
 
-    def row(label: str, key: str, unit: str, source: dict[str, Any] = document) -> list[str]:
-        quantity = source.get(key)
-        if quantity is None:
+    def row(label: str, key: str, unit: str) -> list[str]:
+        said = document.get(key)
+        if said is None:
             return []
-        from bench.quantities import Quantity
-
-        q = Quantity(quantity["value"], quantity["unit"], quantity.get("standard_uncertainty"))
-        q = q.to(unit)
+        q = Quantity(said["value"], said["unit"], said.get("standard_uncertainty")).to(unit)
         return [f"  {label:<22}{show(q.value, q.standard_uncertainty, unit)}"]
 
     lines = [f"{str(document['outcome']).upper()}: {document['reason']}"]
@@ -208,8 +216,9 @@ def _lines(document: dict[str, Any]) -> list[str]:
     lines.append(f"  {'bench time':<22}{document['bench_time']['value']:.1f} s")
     truth = document.get("truth")
     if truth:
-        lines += row("true zero", "zero", "mm", truth)
-        lines += row("true residual OPD", "residual_opd", "nm", truth)
+        lines.append(f"  {'true zero':<22}{truth['zero']['value'] / 1e3:.7f} mm")
+        lines.append(f"  {'true residual OPD':<22}{truth['residual_opd']['value']:.1f} nm")
     lines.append(f"  {'run':<22}{document['run']}")
     lines.append(f"  {'journal head':<22}{str(document['head'])[:16]}")
+    lines.append(f"  {'next':<22}{document['next']}")
     return lines

@@ -3,13 +3,28 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING
+
+import typer
 
 from bench.cli.output import report_error
 from bench.errors import EvenarmError
 
+if TYPE_CHECKING:
+    from bench.procedure.session import RunSession
+
 __all__ = ["open_screen"]
 
 MAIN_JOB = "path-equalisation"
+
+
+def _say_again(session: RunSession) -> None:
+    """What the screen showed last is gone with it; the shell keeps the result."""
+    state = session.state
+    if state is not None and state.outcome is not None:
+        from bench.cli.run import result_document, result_lines
+
+        typer.echo("\n".join(result_lines(result_document(session, state))))
 
 
 def open_screen(*, bench: Path | None, seed: int | None, pace: str) -> int:
@@ -21,6 +36,8 @@ def open_screen(*, bench: Path | None, seed: int | None, pace: str) -> int:
         from bench.cli.run import Asked, new_session
 
         session = new_session(Asked(MAIN_JOB, bench=bench, seed=seed, pace=pace))
-        return run_app(session)
+        status = run_app(session)
+        _say_again(session)
+        return status
     except EvenarmError as error:
         return report_error(error, as_json=False)

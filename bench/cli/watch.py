@@ -13,30 +13,31 @@ from types import FrameType
 
 from bench.cli.output import note
 from bench.errors import BenchFault, UsageError, printable
-from bench.fringes.model import Located
-from bench.procedure.live import LiveView, Question
+from bench.procedure.live import Question
 from bench.procedure.session import RunSession
 from bench.procedure.state import RunState
 
 __all__ = ["Watcher", "signals_stop"]
 
 LOOK_S = 0.05
+REASONS: dict[int, str] = {
+    signal.SIGINT: "the operator pressed Ctrl+C",
+    signal.SIGTERM: "the program was asked to end (SIGTERM)",
+    signal.SIGHUP: "the terminal was lost (SIGHUP)",
+}
 STOP_S = 30.0
 
 
 @contextlib.contextmanager
 def signals_stop(session: RunSession) -> Iterator[None]:
     """While inside, Ctrl-C, a termination and a lost terminal are software stops."""
-    wanted = [signal.SIGINT, signal.SIGTERM]
-    if hasattr(signal, "SIGHUP"):
-        wanted.append(signal.SIGHUP)
 
     def stop(number: int, _frame: FrameType | None) -> None:
         # In a thread: a signal may arrive while this one holds a lock that stopping needs.
-        reason = f"signal {signal.Signals(number).name}"
+        reason = REASONS.get(number, f"signal {number}")
         threading.Thread(target=session.stop, args=(reason,), daemon=True).start()
 
-    before = {number: signal.signal(number, stop) for number in wanted}
+    before = {number: signal.signal(number, stop) for number in REASONS}
     try:
         yield
     finally:
@@ -69,20 +70,21 @@ class Watcher:
     def follow(self) -> None:
         """Until the run has ended."""
         self._thread.start()
-        said, asked, seen = "", "", None
+        asked, told = "", 0
         while not self._done.wait(LOOK_S):
+            told = self._tell(told)
             view = self._session.view()
-            now = _line(view)
-            if now and now != said:
-                _note_wrapped(f"{view.elapsed_s:8.1f} s  ", now)
-                said = now
-            if view.located is not None and view.located is not seen:
-                seen = view.located
-                _note_wrapped(" " * 12, _found(seen))
             if view.question is not None and self._ask and view.question.id != asked:
                 asked = view.question.id
                 threading.Thread(target=self._put, args=(view.question,), daemon=True).start()
+        self._tell(told)
         self._thread.join()
+
+    def _tell(self, told: int) -> int:
+        for time_s, text in self._session.told(told):
+            _note_wrapped(f"{time_s:8.1f} s  ", text)
+            told += 1
+        return told
 
     def end(self) -> None:
         """Whatever ended the watching, nothing is left moving behind it. Idempotent."""
@@ -128,24 +130,6 @@ def _forget_what_was_typed() -> None:
         import termios
 
         termios.tcflush(sys.stdin, termios.TCIFLUSH)
-
-
-def _line(view: LiveView) -> str:
-    """What goes on, empty where nothing worth a line does."""
-    if view.doing in {"nothing moves", "choosing what comes next"}:
-        return ""
-    step = next((step.title for step in view.steps if step.state == "now"), "")
-    place = f"{step}: " if step else ""
-    return place + ("a question for you" if view.question else view.doing)
-
-
-def _found(located: Located) -> str:
-    from bench.quantities import show
-
-    if not located.found or located.zero is None:
-        return f"no packet there: {located.reason}"
-    zero = located.zero
-    return f"packet at {show(zero.value * 1e3, zero.standard_uncertainty * 1e3, 'mm')}"
 
 
 def _note_wrapped(lead: str, text: str) -> None:

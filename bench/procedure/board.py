@@ -22,6 +22,7 @@ __all__ = ["Board"]
 
 FloatArray = NDArray[np.float64]
 _DRAWN = 4000
+TOLD = frozenset({"source-intended", "home-intended", "move-intended", "scan-intended"})
 
 
 @dataclass
@@ -39,6 +40,7 @@ class _Seen:
     intent_expected_s: float | None = None
     remaining_from: tuple[float, float] | None = None  # bench time, seconds left then
     head: str = ""
+    told: list[tuple[float, str]] = field(default_factory=list)
 
 
 class Board:
@@ -66,6 +68,13 @@ class Board:
             elif event.kind == "scan-intended":
                 seen.parts, seen.located = [], None
                 seen.trace_label = f"{event.body['name']}, {event.body['source']}"
+            if event.kind in TOLD:
+                step = self._setup.procedure.steps[state.step].title if state.step >= 0 else ""
+                seen.told.append(
+                    (state.time_s, f"{step}: {doing(state)}" if step else doing(state))
+                )
+            elif event.kind == "located":
+                seen.told.append((state.time_s, _found(event.body)))
             if event.kind.endswith("-intended"):
                 seen.intent_since_s = state.time_s
                 seen.intent_expected_s = event.body.get("expected_time_s")
@@ -96,6 +105,11 @@ class Board:
 
     # --- read by screens ------------------------------------------------------------------------
 
+    def told(self, after: int) -> list[tuple[float, str]]:
+        """What has been begun and found since the line ``after``, each with its bench time."""
+        with self._lock:
+            return self._seen.told[after:]
+
     def view(self) -> LiveView:
         with self._lock:
             return self._view()
@@ -124,8 +138,8 @@ class Board:
             procedure=setup.procedure.name,
             simulated=self._simulated,
             steps=tuple(self._steps()),
-            doing=_doing(state),
-            next_action=_next_action(state),
+            doing=doing(state),
+            next_action=next_action(state),
             question=_question(state),
             source=state.source,
             stage_position_m=stage.position_m if stage else state.position_m,
@@ -201,6 +215,15 @@ def _thinned(parts: list[Readings]) -> tuple[FloatArray, FloatArray]:
     return x_m[keep], signal[keep]
 
 
+def _found(body: Mapping[str, Any]) -> str:
+    """A located entry in a few words."""
+    from bench.quantities import show
+
+    if not body["found"]:
+        return f"no packet there: {body['reason']}"
+    return f"packet at {show(body['zero_m'] * 1e3, body['zero_u_m'] * 1e3, 'mm')}"
+
+
 def _question(state: RunState) -> Question | None:
     pending = state.pending
     if pending is None or pending.kind != "question":
@@ -209,7 +232,7 @@ def _question(state: RunState) -> Question | None:
     return Question(str(body["id"]), body["kind"], str(body["title"]), tuple(body["lines"]))
 
 
-def _doing(state: RunState) -> str:
+def doing(state: RunState) -> str:
     """What the bench does, in a few words."""
     if state.phase == "new":
         return "nothing moves"
@@ -237,7 +260,7 @@ def _doing(state: RunState) -> str:
             return "locating the packet"
 
 
-def _next_action(state: RunState) -> str:
+def next_action(state: RunState) -> str:
     """What the operator does next."""
     if state.phase == "new":
         return "Begin the run"

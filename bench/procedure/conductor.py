@@ -340,7 +340,7 @@ class Conductor:
         source = self._sources[str(body["source"])]
         located = locate_readings(self._spec, source, self._readings)
         self._board.located(located)
-        found = findings(self._spec, self._readings, located, self.state.leg.speed_m_s)
+        found = findings(self._spec, source, self._readings, located, self.state.leg.speed_m_s)
         return said.LocateEnded(found, self._now())
 
 

@@ -30,7 +30,7 @@ from .inputs import (
     Stopped,
 )
 from .results import measurements, result_quantities
-from .state import POSITION, Event, RunState, Setup
+from .state import POSITION, Event, RunState, Setup, evolve
 from .text import ProcedureStep
 
 __all__ = ["MOST_LEGS", "MOST_RETURNS", "decide"]
@@ -157,10 +157,11 @@ def _where(state: RunState, happened: Stopped | Failed) -> dict[str, Any]:
 
 def _stopped(setup: Setup, state: RunState, happened: Stopped) -> tuple[Event, ...]:
     stopped = Event("stopped", _where(state, happened))
+    after = evolve(setup, state, stopped)
     if not happened.at_rest:
         reason = f"{happened.reason}, but {NOT_AT_REST}"
-        return (stopped, _end(setup, state, "fault", reason))
-    return (stopped, _end(setup, state, "stopped", happened.reason))
+        return (stopped, _end(setup, after, "fault", reason))
+    return (stopped, _end(setup, after, "stopped", happened.reason))
 
 
 def _failed(setup: Setup, state: RunState, happened: Failed) -> tuple[Event, ...]:
@@ -175,7 +176,8 @@ def _failed(setup: Setup, state: RunState, happened: Failed) -> tuple[Event, ...
         reason += f" ({happened.mend})"
     if not happened.at_rest:
         reason += f"; {NOT_AT_REST}"
-    return (Event("move-failed", body), _end(setup, state, "fault", reason))
+    failed = Event("move-failed", body)
+    return (failed, _end(setup, evolve(setup, state, failed), "fault", reason))
 
 
 def _end(setup: Setup, state: RunState, outcome: str, reason: str) -> Event:
@@ -196,6 +198,8 @@ def _continue(setup: Setup, state: RunState) -> tuple[Event, ...]:
         return (_end(setup, state, "stopped", state.refused),)
     if not state.position_known:
         return _find_position(setup, state)
+    if state.dark:
+        return _not_found(setup, state, state.missed)
     if state.leg is not None:
         return _leg_on(setup, state, state.leg)
     if not state.step_open:

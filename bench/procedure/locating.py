@@ -14,7 +14,11 @@ from bench.spec.model import BenchSpec, SourceSpec
 
 from .scanning import POLL_S, Readings
 
-__all__ = ["findings", "locate_readings"]
+__all__ = ["findings", "is_dark", "locate_readings"]
+
+NO_LIGHT = (
+    "the detector sees only its dark level: is the lamp on, is a beam or the detector blocked?"
+)
 
 
 def locate_readings(spec: BenchSpec, source: SourceSpec, readings: Readings) -> Located:
@@ -36,8 +40,24 @@ def locate_readings(spec: BenchSpec, source: SourceSpec, readings: Readings) -> 
     return locate(scan, knowledge)
 
 
+def is_dark(spec: BenchSpec, source: SourceSpec, readings: Readings) -> bool:
+    """Whether the level above dark is too low to carry a twentieth of the fringes expected.
+
+    A mean level is never below the amplitude of its fringes, so a source that is on shows here
+    whatever the contrast.
+    """
+    if spec.detector.dark is None or not readings.signal.size:
+        return False
+    above = float(np.median(readings.signal)) - spec.detector.dark
+    return above < 0.05 * source.signal
+
+
 def findings(
-    spec: BenchSpec, readings: Readings, located: Located, speed_m_s: float | None
+    spec: BenchSpec,
+    source: SourceSpec,
+    readings: Readings,
+    located: Located,
+    speed_m_s: float | None,
 ) -> dict[str, Any]:
     """The body of a ``located`` entry: plain numbers with their units in names or beside them."""
     body: dict[str, Any] = {
@@ -48,6 +68,8 @@ def findings(
         "notices": [{"code": n.code, "message": n.message} for n in located.notices],
     }
     unusable = _unusable(spec, readings, located)
+    if is_dark(spec, source, readings):
+        unusable, body["dark"] = NO_LIGHT, True
     if unusable:
         body |= {"found": False, "reason": unusable}
     if not body["found"] or located.zero is None:

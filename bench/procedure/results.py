@@ -27,9 +27,12 @@ def result_quantities(setup: Setup, state: RunState) -> dict[str, Any]:
         result["zero"] = _quantity(zero_m * 1e6, "um", u_m * 1e6)
     if state.findings is not None and "at_wavelength" in state.findings:
         result["at_wavelength"] = state.findings["at_wavelength"]
-    if state.left_at_m is not None:
+    left_at_m = state.left_at_m
+    if left_at_m is None and state.position_known and state.at_rest and state.pending is None:
+        left_at_m = state.position_m
+    if left_at_m is not None:
         result["stage_left_at"] = _quantity(
-            state.left_at_m * 1e6, "um", setup.facts.resolution_m / math.sqrt(12.0) * 1e6
+            left_at_m * 1e6, "um", setup.facts.resolution_m / math.sqrt(12.0) * 1e6
         )
     result["bench_time"] = _quantity(state.time_s - state.began_s, "s")
     return result

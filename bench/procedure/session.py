@@ -237,6 +237,11 @@ class RunSession:
         return self._setup.run
 
     @property
+    def state(self) -> RunState | None:
+        """The run's newest state, None before it began."""
+        return self._conductor.state if self._conductor is not None else None
+
+    @property
     def setup(self) -> Setup:
         return self._setup
 
@@ -251,6 +256,10 @@ class RunSession:
     @property
     def finished(self) -> bool:
         return self._ended.is_set()
+
+    def told(self, after: int) -> list[tuple[float, str]]:
+        """The account of the run since line ``after``: bench time and a few words."""
+        return self._board.told(after)
 
     def view(self) -> LiveView:
         view = self._board.view()
@@ -296,8 +305,8 @@ class RunSession:
             return
         if isinstance(value, str):
             name = printable(value, 80).strip()
-            if not name:
-                raise UsageError("a name is needed", mend="type your name")
+            if len(name) < 2:
+                raise UsageError("a name is needed", mend="type your name, two letters or more")
             conductor.answer(question_id, True, name)
         else:
             conductor.answer(question_id, value, self._options.operator)

@@ -78,6 +78,7 @@ class RunState:
     scans_run: int = 0
     zeros: tuple[ZeroFound, ...] = ()
     missed: str = ""
+    dark: bool = False  # the newest scan saw no light at all
     interrupted: str = ""
     may_home: bool = False
     at_rest: bool = True
@@ -205,7 +206,8 @@ def _located(setup: Setup, state: RunState, body: Body) -> RunState:
     assert belief is not None
     state = replace(state, pending=None, leg=None)
     if not body["found"]:
-        if body.get("blind", False):
+        state = replace(state, dark=bool(body.get("dark", False)))
+        if body.get("blind", False) or state.dark:
             return replace(state, missed=str(body.get("reason", "")))
         low_m, high_m = body["read_m"]  # no evidence of what was not read
         belief = belief.missed(low_m, high_m, leg.detection_probability)
