@@ -162,11 +162,14 @@ class Board:
             residual_opd_standard_uncertainty_m=verdict.get("residual_u_m"),
             elapsed_s=max(0.0, self._now_s - state.began_s),
             remaining_s=self._remaining_s(),
-            progress=self._progress(),
+            progress=self._progress() if _moves(state) else None,
             outcome=state.outcome,
             reason=state.reason,
             result=result_quantities(setup, state) if state.phase == "ended" else {},
             head=seen.head,
+            position_trusted=state.position_known or state.phase == "new",
+            at_rest=state.at_rest,
+            roughly_located=state.findings is not None and not state.zeros,
         )
 
     def _steps(self) -> list[StepView]:
@@ -224,6 +227,11 @@ def _found(body: Mapping[str, Any]) -> str:
     return f"packet at {show(body['zero_m'] * 1e3, body['zero_u_m'] * 1e3, 'mm')}"
 
 
+def _moves(state: RunState) -> bool:
+    """Whether something goes on whose share done can be told from the time it takes."""
+    return state.pending is not None and state.pending.kind in {"source", "home", "move", "scan"}
+
+
 def _question(state: RunState) -> Question | None:
     pending = state.pending
     if pending is None or pending.kind != "question":
@@ -269,10 +277,10 @@ def next_action(state: RunState) -> str:
     if state.phase == "ended":
         return {
             "accepted": "Done. The stage stands at the zero; leave it there",
-            "rejected": "Read the reason, mend it, and run again",
-            "not found": "Check beams and sources, widen [expect], and run again",
-            "stopped": "The run was stopped. Run again when ready",
-        }.get(state.outcome or "", "A device failed. Mend it, then run again")
+            "rejected": "Read the reason and mend it; a new run starts from the shell",
+            "not found": "Check beams and sources, or widen [expect]; a new run starts from the shell",
+            "stopped": "Look where the stage stands; a new run starts from the shell",
+        }.get(state.outcome or "", "Mend what the reason names; a new run starts from the shell")
     question = _question(state)
     if question is None:
         return "Wait; keep hands and draughts away"

@@ -75,3 +75,7 @@ class LiveView:
     result: dict[str, Any] = field(default_factory=dict)
     head: str = ""
     accept_residual_opd_m: float | None = None  # what [accept] asks for, marked on pictures
+    position_trusted: bool = True  # False: a reading may be there, but the run does not rely on it
+    at_rest: bool = True  # False after an end at which the stage did not say that it stands still
+    roughly_located: bool = False  # a packet was seen, by search scans only so far
+    error_lines: tuple[str, ...] = ()  # what, where, why, mend of a run that could not go on

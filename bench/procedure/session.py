@@ -269,13 +269,16 @@ class RunSession:
                 view,
                 outcome="fault",
                 reason=" - ".join(line.strip() for line in self.error.lines()),
+                error_lines=tuple(line.strip() for line in self.error.lines()),
+                at_rest=at_rest,
+                position_trusted=view.position_trusted and at_rest,
                 doing=(
                     "the run has ended; nothing moves"
                     if at_rest
                     else "the run has ended; THE STAGE MAY STILL MOVE"
                 ),
                 next_action=(
-                    "Mend it, then run again"
+                    "Mend what is named; a new run starts from the shell"
                     if at_rest
                     else "Use the power switch of the stage's controller"
                 ),
