@@ -278,7 +278,7 @@ def next_action(state: RunState) -> str:
         return {
             "accepted": "Done. The stage stands at the zero; leave it there",
             "rejected": "Read the reason and mend it; a new run starts from the shell",
-            "not found": "Check beams and sources, or widen [expect]; a new run starts from the shell",
+            "not found": "Check beams and sources, widen [expect]; a new run starts from the shell",
             "stopped": "Look where the stage stands; a new run starts from the shell",
         }.get(state.outcome or "", "Mend what the reason names; a new run starts from the shell")
     question = _question(state)
