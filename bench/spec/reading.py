@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import re
 import tomllib
 from pathlib import Path
 from typing import Any
@@ -10,6 +11,12 @@ from typing import Any
 from bench.errors import InputError
 
 LARGEST_BYTES = 1_000_000
+DEEPEST = 50  # brackets or tables inside each other; a bench needs five
+
+# What hides brackets (text and comments), then the brackets themselves.
+_LONG = r'"{3}(?:\\[\s\S]|[^\\])*?(?:"{3}|\Z)' + r"|'{3}[\s\S]*?(?:'{3}|\Z)"
+_SHORT = r'"(?:\\.|[^"\\\n])*"?' + r"|'[^'\n]*'?|#[^\n]*"
+_BRACKETS = re.compile(rf"{_LONG}|{_SHORT}|[\[{{\]}}]")
 
 __all__ = ["LARGEST_BYTES", "read_bytes", "read_toml"]
 
@@ -61,16 +68,54 @@ def read_text(path: Path, what: str, mend: str, largest: int = LARGEST_BYTES) ->
 def read_toml(path: Path, what: str, mend: str) -> tuple[dict[str, Any], str]:
     """The tables of a TOML file, and the SHA-256 of its bytes. Raises InputError."""
     text, raw = read_text(path, what, mend)
-    try:
-        tables = tomllib.loads(text)
-    except (ValueError, RecursionError) as error:
-        reason = "tables are nested too deep" if isinstance(error, RecursionError) else str(error)
+    line = _too_deep_at(text)
+    tables: dict[str, Any] = {}
+    if not line:
+        try:
+            tables = tomllib.loads(text)
+        except ValueError as error:
+            raise InputError(
+                f"{what} is not valid TOML",
+                where=str(path),
+                why=str(error),
+                mend='mend that line; quantities are written as text: speed = "1 mm/s"',
+            ) from None
+        except RecursionError:
+            line = 1
+    if line or _deep(tables):
         raise InputError(
-            f"{what} is not valid TOML",
-            where=str(path),
-            why=reason,
-            mend='mend that line; quantities are written as text: speed = "1 mm/s"',
-        ) from None
+            f"{what} is nested too deep",
+            where=f"{path}, line {line}" if line > 1 else str(path),
+            why=f"more than {DEEPEST} brackets or tables stand inside each other",
+            mend="close the brackets; " + mend,
+        )
     if not tables:
         raise InputError(f"{what} holds no tables", where=str(path), mend=mend)
     return tables, hashlib.sha256(raw).hexdigest()
+
+
+def _too_deep_at(text: str) -> int:
+    """The line where brackets stand deeper than allowed, or 0.
+
+    Counted before parsing: how deep a parser gets depends on its version and on who calls it.
+    """
+    depth = 0
+    for match in _BRACKETS.finditer(text):
+        if match[0] in "[{":
+            depth += 1
+            if depth > DEEPEST:
+                return text.count("\n", 0, match.start()) + 1
+        elif match[0] in "]}":
+            depth = max(0, depth - 1)
+    return 0
+
+
+def _deep(tables: dict[str, Any]) -> bool:
+    """Whether tables stand deeper than allowed, as dotted keys can make them without brackets."""
+    level: list[Any] = [tables]
+    for _ in range(DEEPEST + 1):
+        inner: list[Any] = []
+        for item in level:
+            inner += item.values() if isinstance(item, dict) else item
+        level = [item for item in inner if isinstance(item, dict | list)]
+    return bool(level)
