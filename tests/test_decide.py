@@ -327,6 +327,29 @@ def test_a_scan_that_can_read_nothing_more_is_not_made_for_ever():
     assert state.scans_run < 20
 
 
+def test_yes_to_another_question_is_no_leave_to_home():
+    world = World(setup())
+    world.begin()
+    world.feed(world.answer())
+    assert world.state.pending.body["kind"] == "acknowledge"
+    world.feed(world.answer())
+    assert not world.state.may_home
+
+
+def test_glass_widens_the_belief_only_between_wavelengths():
+    widths = []
+    for other_m in (600e-9, 620e-9):
+        coarse = dataclasses.replace(FACTS.sources[1], mean_wavelength_m=other_m)
+        facts = dataclasses.replace(FACTS, glass_shift_m=3e-6, sources=(FACTS.sources[0], coarse))
+        world = World(setup(facts=facts))
+        world.begin()
+        while world.state.leg is None or world.state.leg.purpose == "search":
+            world.feed(world.answer())
+        widths.append(world.state.belief.half_width_m)
+    assert widths[0] == pytest.approx(1.96e-6, rel=0.1)
+    assert widths[1] == pytest.approx(1.96 * 10**0.5 * 1e-6, rel=0.1)
+
+
 def test_what_was_not_read_is_not_believed_to_be_empty():
     world = World(setup(), zero_m=20e-3)
     world.read = lambda body: (body["start_m"], body["start_m"] + 1e-7)

@@ -195,6 +195,25 @@ def test_a_lapsed_lease_stops_the_axis(bench):
         bench.guard.start_move(StagePosition(12.1e-3), 1e-3)
 
 
+def test_the_watch_stops_an_axis_whose_program_fell_silent():
+    stage, told = FakeStage(), threading.Event()
+    port: Port[FakeStage] = Port("stage", stage)
+    guard = Guard(port, SPEC, lease_s=0.02)  # type: ignore[arg-type]
+    guard.arm()
+    guard.start_move(StagePosition(12e-3), 1e-3)
+    stop = stage.stop
+
+    def stopped(*, timeout_s: float) -> None:
+        stop(timeout_s=timeout_s)
+        told.set()
+
+    stage.stop = stopped  # type: ignore[method-assign]
+    assert told.wait(10)
+    assert guard.lapsed
+    guard.close()
+    port.close()
+
+
 def test_a_stop_that_was_not_answered_stays_owed(bench):
     bench.guard.arm()
     bench.guard.start_move(StagePosition(12e-3), 1e-3)
