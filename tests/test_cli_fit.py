@@ -11,6 +11,7 @@ import pytest
 from typer.testing import CliRunner, Result
 
 from bench.cli import app
+from bench.cli.fit import _alarm_text, _chance_text
 
 ZERO_UM = 13.2184
 
@@ -195,3 +196,43 @@ def test_names_from_outside_do_not_reach_the_terminal_raw(folder: Path) -> None:
     sly = folder / "a\x1b[2Jb.csv"
     sly.write_text((folder / "packet.csv").read_text())
     assert "\x1b" not in run(sly).stdout
+
+
+def test_the_uncertainty_of_a_count_moves_all_positions_and_is_said(folder: Path) -> None:
+    said = ["--position-unit", "1.00(4) um", "--path-factor", "2"]
+    (document,) = documents(run(folder / "counts.csv", *said, "--json"))
+    assert document["position_unit"] == {"value": 1.0, "unit": "um", "standard_uncertainty": 0.04}
+    assert set(document["zero"]) == {"value", "unit", "standard_uncertainty"}
+    assert document["zero"]["standard_uncertainty"] < 0.01  # not 4 % of 13 um
+    lines = run(folder / "counts.csv", *said).stdout.splitlines()
+    at = next(i for i, line in enumerate(lines) if line.startswith("  zero "))
+    assert "without the 4 % of the position unit, which moves all positions alike" in lines[at + 1]
+    exact = run(folder / "counts.csv", "--position-unit", "1 um", "--path-factor", "2")
+    assert "moves all positions" not in exact.stdout
+
+
+def test_a_unit_of_the_file_is_not_overridden(folder: Path) -> None:
+    result = run(folder / "packet.csv", "--position-unit", "18.55(74) pm", "--json")
+    (document,) = documents(result)
+    assert document["zero"]["value"] == pytest.approx(ZERO_UM, abs=0.01)
+    assert "position_unit" not in document
+    assert "its positions are in um; --position-unit is not used" in result.stderr
+
+
+def test_what_would_give_lengths_is_named(folder: Path) -> None:
+    result = run(folder / "counts.csv")
+    assert "--position-unit" in result.stdout
+    assert "--path-factor" in result.stdout
+
+
+def test_chances_are_said_in_words(folder: Path) -> None:
+    text = run(folder / "packet.csv").stdout
+    assert "that it is the one nearest to the zero: certain" in text
+    assert "chance that noise alone looks like this: below 1 in " in text
+    assert _chance_text(0.54) == "54 %"
+    assert _alarm_text(1e-3) == "below 1 in 1000"
+    assert _alarm_text(0.2) == "at most 20 %"
+
+
+def test_bad_rows_are_counted_in_grammar(folder: Path) -> None:
+    assert "1 bad row left out (line 10)" in run(folder / "bad.csv").stderr

@@ -20,7 +20,8 @@ from bench.cli.output import (
 from bench.errors import EvenarmError, UsageError, printable
 
 if TYPE_CHECKING:
-    from bench.fringes.model import Estimate, Located
+    from bench.fringes.model import Estimate, Located, Notice
+    from bench.quantities import Quantity
     from bench.scanfile import ScanFile, ScanOptions
 
 __all__ = ["command", "fit_document", "fit_lines"]
@@ -78,6 +79,13 @@ def command(
             material=material,
             at=at,
         )
+        if is_opd and path_factor is not None:
+            raise UsageError(
+                "--is-opd and --path-factor exclude each other",
+                where="--path-factor",
+                why="a position that is an optical path difference has no path factor",
+                mend="leave one of the two out",
+            )
         options = _with_bench(options, bench, source)
     except EvenarmError as error:
         raise typer.Exit(report_error(error, as_json=as_json)) from None
@@ -94,6 +102,8 @@ def command(
             worst = max(worst, EXIT_NEGATIVE)
         if scan_file.bad_rows:
             note(_bad_rows_text(scan_file))
+        if scan_file.ignored_unit:
+            note(_ignored_unit_text(scan_file))
         if as_json:
             emit_json(fit_document(scan_file, located))
         else:
@@ -144,7 +154,14 @@ def _bad_rows_text(scan_file: ScanFile) -> str:
     rows = scan_file.bad_rows
     shown = ", ".join(str(row) for row in rows[:8]) + (", ..." if len(rows) > 8 else "")
     name = printable(scan_file.path)
-    return f"{name}: {len(rows)} bad rows left out (line {shown})"
+    if len(rows) == 1:
+        return f"{name}: 1 bad row left out (line {shown})"
+    return f"{name}: {len(rows)} bad rows left out (lines {shown})"
+
+
+def _ignored_unit_text(scan_file: ScanFile) -> str:
+    unit = printable(scan_file.ignored_unit, 20)
+    return f"{printable(scan_file.path)}: its positions are in {unit}; --position-unit is not used"
 
 
 # --- for programs --------------------------------------------------------------------------------
@@ -187,12 +204,21 @@ def fit_document(scan_file: ScanFile, located: Located) -> dict[str, Any]:
         }
     if math.isfinite(located.noise):
         document["noise"] = quantity(located.noise, light)
+    if scan_file.position_unit is not None:
+        document["position_unit"] = scan_file.position_unit.as_json()
     document["false_alarm_probability"] = located.false_alarm_probability
     document["bad_rows"] = len(scan_file.bad_rows)
     document["warnings"] = [
-        {"code": notice.code, "message": notice.message} for notice in located.notices
+        {"code": notice.code, "message": _message(notice)} for notice in located.notices
     ]
     return _present(document)
+
+
+def _message(notice: Notice) -> str:
+    """The notice, with the option that would mend it where it is one of this command's."""
+    if notice.code != "no-length":
+        return notice.message
+    return f"{notice.message} (--position-unit and --path-factor say it)"
 
 
 def _fringe_document(scan_file: ScanFile, located: Located, axis: float) -> dict[str, Any] | None:
@@ -254,10 +280,14 @@ def fit_lines(scan_file: ScanFile, located: Located) -> list[str]:
     else:
         what = "OPD" if scan_file.axis == "opd" else "position"
         put("zero", located.zero, axis, unit, f"  {what}, group zero")
+        share = _share_text(scan_file.position_unit)
+        if share:
+            rows.append(("", share))
         put("at wavelength", located.at_wavelength_m, 1e9, "nm")
         if located.fringe_zero is not None:
             fringe = located.fringe_zero
-            told = f"  {fringe.kind}, the nearest with probability {fringe.probability:.3g}"
+            sure = _chance_text(fringe.probability)
+            told = f"  {fringe.kind}; that it is the one nearest to the zero: {sure}"
             put("fringe zero", fringe.x, axis, unit, told)
         put("contrast", located.contrast, 1.0, "")
         put("amplitude", located.amplitude, 1.0, light)
@@ -275,8 +305,29 @@ def fit_lines(scan_file: ScanFile, located: Located) -> list[str]:
     if math.isfinite(located.noise):
         rows.append(("noise", f"{located.noise:.3g} {light}".strip() + "  of one reading"))
     if located.found:
-        rows.append(("false alarm", f"{located.false_alarm_probability:.0e} at most"))
-    rows += [(f"warning {note_.code}", note_.message) for note_ in located.notices]
+        alarm = _alarm_text(located.false_alarm_probability)
+        rows.append(("false alarm", f"chance that noise alone looks like this: {alarm}"))
+    rows += [(f"warning {note_.code}", _message(note_)) for note_ in located.notices]
     width = max(len(label) for label, _ in rows)
     name = printable(scan_file.path)
     return [name, *(f"  {label:<{width}}  {printable(text, 200)}" for label, text in rows)]
+
+
+def _share_text(count: Quantity | None) -> str:
+    """What of the position unit's uncertainty the zero's does not carry, and why."""
+    if count is None or not count.standard_uncertainty:
+        return ""
+    percent = 100.0 * count.standard_uncertainty / count.value
+    return f"without the {percent:.2g} % of the position unit, which moves all positions alike"
+
+
+def _chance_text(probability: float) -> str:
+    return "certain" if probability >= 0.995 else f"{100.0 * probability:.0f} %"
+
+
+def _alarm_text(probability: float) -> str:
+    if not math.isfinite(probability):
+        return "not known"
+    if probability >= 0.01:
+        return f"at most {100.0 * probability:.2g} %"
+    return f"below 1 in {float(f'{1.0 / max(probability, 1e-12):.2g}'):.0f}"

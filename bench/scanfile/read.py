@@ -7,6 +7,7 @@ import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -15,7 +16,12 @@ from bench.fringes.model import Knowledge, Scan
 from bench.scanfile.columns import LENGTHS, OPDS, STEPS, Column, choose, header
 from bench.scanfile.text import HOW, comments_of, number, read_text, separator_of, split
 
+if TYPE_CHECKING:
+    from bench.quantities import Quantity
+
 AIR_INDEX = 1.00027  # where no climate is known
+SMALLEST_COUNT_M = 1e-15  # finer than any encoder divides
+LARGEST_COUNT_M = 1.0
 
 
 @dataclass(frozen=True)
@@ -47,8 +53,9 @@ class ScanOptions:
 class ScanFile:
     """A file as it was understood.
 
-    ``axis`` is ``position`` or ``opd``; ``scan.x`` is in metres where ``unit`` is ``um``, in counts
-    where it is ``counts``. ``bad_rows`` are the numbers of the lines that were left out.
+    ``position_unit`` carries an uncertainty that moves all positions alike, so it is not in that of
+    the zero. ``axis`` is ``position`` or ``opd``; ``scan.x`` is in metres where ``unit`` is ``um``,
+    in counts where it is ``counts``. ``bad_rows`` are the numbers of the lines that were left out.
     """
 
     path: Path
@@ -59,6 +66,8 @@ class ScanFile:
     signal_unit: str
     bad_rows: tuple[int, ...]
     columns: tuple[str, ...]
+    position_unit: Quantity | None = None  # what a count is worth, where the caller said so
+    ignored_unit: str = ""  # the file's own unit, where it stands against the caller's
 
 
 def read_scan_file(path: Path | str, options: ScanOptions | None = None) -> ScanFile:
@@ -137,7 +146,11 @@ def _build(
     where = str(file)
     place, light = chosen
     is_opd = said.is_opd or (place.name in OPDS)
-    worth, relative = _worth(place, said.position_unit, where)
+    own_unit = _length_unit(place.unit) is not None
+    count = _count(said.position_unit, where)
+    if own_unit:
+        count = None
+    worth, relative = _worth(place, count, where)
     x = values[:, 0] * (worth if worth is not None else 1.0)
     opd_per_m = 1.0 if is_opd else _opd_per_m(comments, said, where)
     signal = values[:, 1]
@@ -172,6 +185,8 @@ def _build(
         signal_unit=light.unit or ("counts" if light.name == "counts" else ""),
         bad_rows=bad,
         columns=tuple(column.title for column in columns),
+        position_unit=count,
+        ignored_unit=place.unit if own_unit and said.position_unit is not None else "",
     )
 
 
@@ -188,22 +203,43 @@ def _quantity(text: str, kind: str, where: str, key: str) -> tuple[float, float 
     return quantity.si, quantity.si_uncertainty
 
 
-def _worth(place: Column, text: str | None, where: str) -> tuple[float | None, float]:
+def _length_unit(unit: str) -> float | None:
+    """Metres for one of a unit of length in a header; None where it is none of those."""
+    return LENGTHS.get(unit, LENGTHS.get(unit.lower()))
+
+
+def _count(text: str | None, where: str) -> Quantity | None:
+    """What ``--position-unit`` says that one count is worth; None where it says nothing."""
+    if text is None:
+        return None
+    from bench.quantities import parse
+
+    written = text if re.match(r"\s*[+-]?[\d.,(]", text) else f"1 {text}"
+    key = f"{where}, --position-unit"
+    try:
+        count = parse(written, "length", where=key)
+    except QuantityError as error:
+        raise ScanFileError(error.what, where=key, why=error.why, mend=error.mend) from None
+    if not SMALLEST_COUNT_M <= count.si <= LARGEST_COUNT_M:
+        raise ScanFileError(
+            "what one unit of the position is worth must be more than zero"
+            if count.si <= 0.0
+            else "this cannot be what one unit of the position is worth",
+            where=key,
+            why=f"it says {text!r}; possible is {SMALLEST_COUNT_M:g} m to {LARGEST_COUNT_M:g} m",
+            mend='give a length such as "18.55(74) pm"; a sign belongs to the path factor',
+        )
+    return count
+
+
+def _worth(place: Column, count: Quantity | None, where: str) -> tuple[float | None, float]:
     """Metres for one unit of the position column with relative uncertainty; None where unknown."""
-    if text is not None:
-        written = text if re.match(r"\s*[+-]?[\d.,]", text) else f"1 {text}"
-        value, uncertainty = _quantity(written, "length", where, "--position-unit")
-        if value <= 0.0:
-            raise ScanFileError(
-                "what one unit of the position is worth must be more than zero",
-                where=f"{where}, --position-unit",
-                why=f"it says {text!r}",
-                mend='give a length such as "18.55(74) pm"; a sign belongs to the path factor',
-            )
-        return value, (uncertainty or 0.0) / value
+    if count is not None:
+        return count.si, (count.si_uncertainty or 0.0) / count.si
     unit = place.unit
-    if unit in LENGTHS or unit.lower() in LENGTHS:
-        return LENGTHS.get(unit, LENGTHS.get(unit.lower(), 1.0)), 0.0
+    length_m = _length_unit(unit)
+    if length_m is not None:
+        return length_m, 0.0
     if unit == "" or unit.lower() in STEPS:
         return None, 0.0
     value, uncertainty = _quantity(f"1 {unit}", "length", where, f"column {place.title}")
