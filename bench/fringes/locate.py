@@ -30,7 +30,7 @@ from bench.fringes.results import Solution
 from bench.fringes.solve import solve
 from bench.fringes.trend import flat_tops, lone_spikes, robust_spread, slow_level
 from bench.fringes.verdict import EVERYWHERE, LINE, judge
-from bench.fringes.window import LEAST_CLEAR, Window, clear_margin, settle
+from bench.fringes.window import LEAST_CLEAR, Window, clear_margin, lit, settle
 
 LEAST_READINGS = 24
 DROWNED = 0.3  # of a steady line
@@ -87,7 +87,11 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     if bool(np.any(hum)):
         signal, flat = signal - hum, flat - hum
         window = settle(u, flat, candidate, band_known=band is not None) or window
-    solution = solve(u, signal, window, known, per_m)
+    wider = None
+    if band is not None and per_m is not None:
+        light = known.light and (known.light[0] * per_m, known.light[1] * per_m)
+        wider = lit(u, flat, window, light)
+    solution = solve(u, signal, window, known, per_m, wider)
     return _result(scan, known, u, signal, window, solution, false_alarm, notices, middle, span)
 
 

@@ -44,13 +44,16 @@ class Knowledge:
 
     ``band`` is the source's half-power band as vacuum wavenumbers in 1/m, (low, high), and makes
     scans below one reading a fringe usable. ``at_wavelength_m`` is where the group zero is wanted.
-    ``glass`` names the material of any residual glass. ``noise`` is of one reading.
+    ``glass`` names the material of any residual glass. ``noise`` is of one reading. ``light`` is
+    where the source has any light worth speaking of, in 1/m (low, high): a lamp between hard edges
+    may have half of its light beyond its half-power points.
     """
 
     band: tuple[float, float] | None = None
     at_wavelength_m: float | None = None
     glass: str | None = None
     noise: float | None = None
+    light: tuple[float, float] | None = None
 
 
 @dataclass(frozen=True)

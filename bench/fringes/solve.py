@@ -26,13 +26,26 @@ OUTLIER = 6.0
 
 
 def solve(
-    u: FloatArray, signal: FloatArray, window: Window, known: Knowledge, per_m: float | None
+    u: FloatArray,
+    signal: FloatArray,
+    window: Window,
+    known: Knowledge,
+    per_m: float | None,
+    wider: Window | None = None,
 ) -> Solution:
-    """The packet in ``window`` of the sorted readings (u, signal); ``per_m`` is OPD a unit of u."""
+    """The packet in ``window`` of the sorted readings (u, signal); ``per_m`` is OPD a unit of u.
+
+    ``wider`` is the same window with a wider band, used where the source is known to have light
+    there or it explains the readings better.
+    """
     part, values = u[window.first : window.stop], signal[window.first : window.stop]
     cut = window.first == 0 or window.stop == u.size
     prior = CUT_BEND_PRIOR if cut else BEND_PRIOR
     solution = _rounds(part, values, window.fit, window, known, per_m, prior)
+    if wider is not None:
+        more = _rounds(part, values, wider.fit, wider, known, per_m, prior)
+        if known.light is not None or _explains_more(more.fit, solution.fit):
+            solution, window = more, wider
     error = slow_position_error(part, solution.fit)
     if error is None:
         return solution
@@ -50,6 +63,19 @@ def solve(
         if more is not None:
             error = error + more
     return replace(solution, ruled=True)
+
+
+def _explains_more(more: PacketFit, less: PacketFit) -> bool:
+    """Whether the band's added frequencies earn their place (twice Schwarz 1978's penalty).
+
+    Sidebands that surging positions write into the fringes do not: they turn the phase, which an
+    added frequency with the packet's own phase cannot.
+    """
+    n = more.residual.size
+    gain = n * math.log(
+        float(np.sum(less.residual**2)) / max(float(np.sum(more.residual**2)), 1e-300)
+    )
+    return gain > 2.0 * max(1, more.frequency.size - less.frequency.size) * math.log(n)
 
 
 def _dispersion(
@@ -96,6 +122,8 @@ def _rounds(
     far = window.width
     guesses: list[tuple[float, float]] = []
     sizes: FloatArray | None = None
+    if start.size is not None:
+        sizes, far = np.full(start.frequency.size, start.size), 0.7 * far
     for turn in range(rounds):
         dispersion = _dispersion(known, reference, scale, per_m)
         if turn == 0:
@@ -148,8 +176,9 @@ def _unheld(
     """The same packet with every amplitude free: less sure, but not drawn towards zero."""
     fit = solution.fit
     guess = (fit.shift, fit.bend)
+    held = None if start.size is None else np.full(start.frequency.size, start.size)
     free = fit_packet(
-        part, values, weight, start, fit.reference, fit.dispersion, bend_prior, guess, far
+        part, values, weight, start, fit.reference, fit.dispersion, bend_prior, guess, far, held
     )
     variance = solution.shares.variance(free.slope, free.fringes)
     variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -15,6 +15,11 @@ WIDEST = 4.0  # envelopes: more than glass draws a packet out to, and still be s
 REACH = 2.6  # half a window over the envelope's full width at half maximum
 MOST_UNKNOWNS = 160
 LEAST_CLEAR = 1.2
+DARKEST = 0.45  # of the band's middle, and its inverse: how far light beyond it is looked for
+LIT = 6.0  # of the noise's power: seven in a thousand of noise's are above it
+SEARCHED = 4.0  # readings a fringe from which on light beyond the band is looked for
+FINEST = 0.75  # frequencies' spacing times the window: finer is undetermined
+DIM = 2e-4  # of the strongest power
 MARGINS = (1.25, 0.9, 0.65)  # of the half-power band to either side: where a Gaussian is at 1.3 %
 
 
@@ -66,13 +71,16 @@ def clear_margin(x: FloatArray, candidate: Candidate) -> float:
     place = x[(x > candidate.x - reach) & (x < candidate.x + reach)]
     if place.size < 8:
         return MARGINS[0]
-    reach = 0.5 * float(place[-1] - place[0])
-    count = int(np.ceil(2.0 * MARGINS[0] * size * 2.0 * reach * 4.0)) + 3
-    away = np.linspace(-MARGINS[0], MARGINS[0], count)
-    double = 2.0 * (middle + away * size)
-    together = np.abs(fourier_sum(place, np.ones(place.size), double)) / place.size
-    folded = np.abs(away[together > 0.6])
-    return float(folded.min()) if folded.size else MARGINS[0]
+    away = _folded(place, middle, -MARGINS[0] * size, MARGINS[0] * size) / size
+    return float(np.abs(away).min()) if away.size else MARGINS[0]
+
+
+def _folded(place: FloatArray, middle: float, below: float, above: float) -> FloatArray:
+    """Distances from ``middle``, between the two given, that readings there cannot tell apart."""
+    span = float(place[-1] - place[0])
+    away = np.linspace(below, above, int(np.ceil((above - below) * span * 4.0)) + 3)
+    together = np.abs(fourier_sum(place, np.ones(place.size), 2.0 * (middle + away))) / place.size
+    return np.asarray(away[together > 0.6], dtype=np.float64)
 
 
 def settle(
@@ -151,6 +159,74 @@ def _settle(
         if band_known:
             width = max(width, ENVELOPE_FWHM / (2.5 * (candidate.high - candidate.low)))
     return result
+
+
+def lit(
+    x: FloatArray, signal: FloatArray, window: Window, light: tuple[float, float] | None
+) -> Window | None:
+    """The window with its band widened to wherever else there may be light; None where nowhere.
+
+    A lamp between hard edges may have half of its light beyond its half-power points. Left out of
+    the fit, glass turns that light into a shift of the zero. ``x`` rising. ``light`` is where
+    the source has any; where it is not known it is looked for, in finely sampled fringes only, as
+    far as the band does not fold onto itself.
+    """
+    part, values = x[window.first : window.stop], signal[window.first : window.stop]
+    middle = 0.5 * (window.low + window.high)
+    per_fringe = (part.size - 1) / float(part[-1] - part[0]) / middle
+    if light is None and per_fringe < SEARCHED:
+        return None
+    low, high = light or (DARKEST * middle, middle / DARKEST)
+    away = _folded(part, middle, min(low - middle, -1e-9), max(high - middle, 1e-9))
+    low = min(window.low, max(low, middle + float(np.max(away[away < 0.0], initial=-middle))))
+    high = max(window.high, min(high, middle + float(np.min(away[away > 0.0], initial=high))))
+    centre, unlit = window.fit.origin, window.fit.frequency
+    # as many frequencies as the readings can hold apart from each other, and no more
+    most = min(MOST_UNKNOWNS, int(part.size / 2.5) - 3)
+    span = float(part[-1] - part[0])
+    step = max(float(unlit[1] - unlit[0]), FINEST / span, (high - low) / max(most, 1))
+    inner = int((unlit[-1] - unlit[0]) / step) + 1
+    below, above = int((unlit[0] - low) / step), max(0, int((high - unlit[-1]) / step))
+    if inner < 4 or below + above <= 0:
+        return None
+    count = below + inner + above
+    frequency = float(unlit[0]) + step * (np.arange(count) - below)
+    first, last = (
+        (0, count - 1) if light else _bright(part, values, centre, frequency, below, inner)
+    )
+    if first == below and last == below + inner - 1:
+        return None
+    kept = frequency[first : last + 1]
+    # nothing is much brighter than what was seen within the band
+    size = float(np.abs(window.fit.c).max()) * step / float(unlit[1] - unlit[0])
+    fit = fit_linear(part, values, centre, kept, np.ones(part.size), size)
+    return replace(window, low=float(kept[0]), high=float(kept[-1]), fit=fit)
+
+
+def _bright(
+    part: FloatArray,
+    values: FloatArray,
+    origin: float,
+    frequency: FloatArray,
+    below: int,
+    inner: int,
+) -> tuple[int, int]:
+    """First and last of the frequencies with light, at least the ``inner`` ones from ``below``."""
+    wide = fit_linear(part, values, origin, frequency, np.ones(part.size))
+    power = np.abs(wide.c) ** 2
+    noise = 4.0 * float(np.sum(wide.residual**2)) / max(1, wide.freedom) / part.size
+    over = power > np.maximum(LIT * noise, DIM * float(power.max()))
+    first, last = below, below + inner - 1
+    # two frequencies in three: a lamp's curve has no gaps, and one of noise is no light
+    while first > 0 and int(over[max(0, first - 3) : first].sum()) >= 2:
+        first -= 1
+    while last < frequency.size - 1 and int(over[last + 1 : last + 4].sum()) >= 2:
+        last += 1
+    if first < below:
+        first = max(0, first - 1)
+    if last > below + inner - 1:
+        last = min(frequency.size - 1, last + 1)
+    return first, last
 
 
 def _around(middle: float, half: float) -> tuple[float, float]:

@@ -35,22 +35,39 @@ class LinearFit:
     residual: FloatArray
     leverage: FloatArray
     freedom: int
+    size: float | None = None
 
 
 def fit_linear(
-    x: FloatArray, signal: FloatArray, origin: float, frequency: FloatArray, weight: FloatArray
+    x: FloatArray,
+    signal: FloatArray,
+    origin: float,
+    frequency: FloatArray,
+    weight: FloatArray,
+    size: float | None = None,
 ) -> LinearFit:
-    """Weighted least squares of a quadratic level and a free complex spectrum."""
+    """Weighted least squares of a quadratic level and a free complex spectrum.
+
+    ``size`` holds the spectrum: the standard deviation of a prior on each of its amplitudes, for a
+    band with frequencies that the readings determine badly; ``freedom`` is then a lower limit.
+    """
     level_columns = polynomial(x, TREND_ORDER)
     design = np.hstack([level_columns, harmonics(x - origin, frequency)])
     root = np.sqrt(weight)
     weighted = design * root[:, None]
-    size, vectors = np.linalg.eigh(weighted.T @ weighted)
-    keep = size > 1e-10 * size[-1]
-    half = vectors[:, keep] / np.sqrt(size[keep])
+    k, p = frequency.size, TREND_ORDER + 1
+    normal = weighted.T @ weighted
+    if size is not None:
+        free = fit_linear(x, signal, origin, frequency, weight)
+        noise2 = float(np.sum(weight * free.residual**2)) / max(1, free.freedom)
+        hold = np.full(p + 2 * k, noise2 / size**2)
+        hold[:p] = 0.0
+        normal = normal + np.diag(hold)
+    strength, vectors = np.linalg.eigh(normal)
+    keep = strength > 1e-10 * strength[-1]
+    half = vectors[:, keep] / np.sqrt(strength[keep])
     left = weighted @ half
     solution = half @ (left.T @ (signal * root))
-    k, p = frequency.size, TREND_ORDER + 1
     return LinearFit(
         origin=origin,
         frequency=frequency,
@@ -59,6 +76,7 @@ def fit_linear(
         residual=signal - design @ solution,
         leverage=np.einsum("ij,ij->i", left, left),
         freedom=x.size - int(keep.sum()),
+        size=size,
     )
 
 

@@ -36,8 +36,17 @@ def locate_readings(spec: BenchSpec, source: SourceSpec, readings: Readings) -> 
         at_wavelength_m=spec.reference_wavelength_m,
         glass=spec.glass,
         noise=spec.detector.noise,
+        light=_light(source),
     )
     return locate(scan, knowledge)
+
+
+def _light(source: SourceSpec) -> tuple[float, float] | None:
+    """The outermost wavenumbers where the source has a hundredth of its greatest power."""
+    bright = np.flatnonzero(source.power >= 0.01 * float(np.max(source.power, initial=0.0)))
+    if bright.size < 2:
+        return None
+    return float(source.wavenumber[bright[0]]), float(source.wavenumber[bright[-1]])
 
 
 def is_dark(spec: BenchSpec, source: SourceSpec, readings: Readings) -> bool:
