@@ -61,6 +61,23 @@ CONFIRM = Question(
     ),
 )
 
+LOST = Question(
+    "position",
+    "confirm",
+    "The stage position is not known",
+    (
+        "The run before this one was cut off while the stage moved.",
+        "Look at the stage. It must be free to travel to its origin.",
+        "Yes: it is homed now, which moves it. No: the run ends and nothing moves.",
+    ),
+)
+HELD = (
+    "Another process writes to this journal",
+    "where: /home/lab/benches/north-table/logs/journal.db",
+    "why: held by ada, process 1031 on north, since 2024-05-06 07:08:09",
+    "mend: end that process, or give this bench another journal with records = in bench.toml",
+)
+
 
 def steps(now: int, state: str = "now", detail: str = "") -> tuple[StepView, ...]:
     """All steps before ``now`` done, that one in ``state``, the rest open."""
@@ -102,7 +119,7 @@ BEFORE = LiveView(
     half_width_start_m=4.75e-3,
     opd_per_m=2.00054,
     accept_residual_opd_m=200e-9,
-    head="9f3c21ab77aa",
+    head="9f3c21ab77aa01d2c4e8b6f0",
 )
 ASKED = dataclasses.replace(
     BEFORE, steps=steps(0), question=CAUTION, doing="waiting for you; nothing moves", elapsed_s=3
@@ -151,13 +168,27 @@ ENDED = dataclasses.replace(
     progress=None,
     elapsed_s=187.0,
     remaining_s=None,
-    head="41d07be2c0ff",
+    head="41d07be2c0ff5a93b17e6d20",
 )
 VIEWS = {
     "before": BEFORE,
     "caution": ASKED,
     "confirm": dataclasses.replace(ASKED, steps=steps(1), question=CONFIRM),
     "scanning": SCANNING,
+    "rough": dataclasses.replace(
+        FOUND,
+        steps=steps(
+            2,
+            detail="Narrows ±4.75 mm to ±12 µm with red before the packet of white is looked for",
+        ),
+        doing="moving to 7.2916 mm, overshoot before the run-up",
+        zero_m=13.22e-3,
+        zero_standard_uncertainty_m=None,
+        half_width_m=12e-6,
+        roughly_located=True,
+        stage_position_m=11.71210e-3,
+        located=None,
+    ),
     "located": FOUND,
     "accepted": dataclasses.replace(
         ENDED,
@@ -169,7 +200,7 @@ VIEWS = {
         steps=steps(6, "failed"),
         outcome="rejected",
         reason="the two scans disagree by 214 nm of OPD, more than scans_agree = 100 nm allows",
-        next_action="Read the reason, mend it, and run again",
+        next_action="Read the reason and mend it; a new run starts from the shell",
     ),
     "not-found": dataclasses.replace(
         SCANNING,
@@ -186,10 +217,43 @@ VIEWS = {
         stage_known=False,
         outcome="fault",
         reason="the stage did not answer within 0.5 s; is its controller switched on?",
-        next_action="A device failed. Mend it, then run again",
+        next_action="Mend what the reason names; a new run starts from the shell",
         detector_saturated=True,
         progress=None,
         remaining_s=None,
+    ),
+    "lost": dataclasses.replace(
+        ASKED,
+        steps=steps(-1),
+        question=LOST,
+        stage_position_m=7.5e-3,
+        position_trusted=False,
+    ),
+    "runaway": dataclasses.replace(
+        SCANNING,
+        steps=steps(2, "failed"),
+        doing="the run has ended; THE STAGE MAY STILL MOVE",
+        stage_position_m=7.67766e-3,
+        stage_moving=False,
+        position_trusted=False,
+        at_rest=False,
+        outcome="fault",
+        reason="stage: it does not answer; look at its cable and its supply, but the stage did "
+        "not confirm that it stands still: use the power switch of its controller",
+        next_action="Use the power switch of the stage's controller",
+        progress=None,
+        remaining_s=None,
+    ),
+    "held": dataclasses.replace(
+        BEFORE,
+        stage_position_m=None,
+        stage_known=False,
+        outcome="fault",
+        doing="the run has ended; nothing moves",
+        next_action="Mend what is named; a new run starts from the shell",
+        reason=" - ".join(HELD),
+        error_lines=HELD,
+        head="",
     ),
     "stopped": dataclasses.replace(
         SCANNING,
@@ -198,7 +262,7 @@ VIEWS = {
         doing="the run has ended; nothing moves",
         outcome="stopped",
         reason="software stop pressed",
-        next_action="The run was stopped. Run again when ready",
+        next_action="Look where the stage stands; a new run starts from the shell",
         progress=None,
         remaining_s=None,
     ),

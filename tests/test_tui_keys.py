@@ -364,6 +364,22 @@ def test_no_is_an_answer() -> None:
     assert control.calls == [("answer", "q2", False)]
 
 
+@pytest.mark.parametrize("key", ["enter", "a", "space", "escape", "7"])
+def test_another_key_than_yes_or_no_is_told_so(key: str) -> None:
+    control = FakeControl("confirm")
+
+    async def keys(pilot, app, ticks) -> None:
+        ticks.now += 1.0
+        await read(pilot)
+        assert "Press Y or N" not in screen_text(app)
+        await press(pilot, key)
+        await see(pilot, "Press Y or N")
+        await press(pilot, "y")
+
+    play(control, keys)
+    assert control.calls == [("answer", "q2", True)]
+
+
 def test_letters_do_nothing_while_the_bench_works() -> None:
     control = FakeControl("scanning")
 

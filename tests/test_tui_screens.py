@@ -12,7 +12,7 @@ from test_tui_fake import VIEWS, FakeControl
 from bench.tui.app import EvenarmApp
 from bench.tui.glyphs import ASCII, FULL, Glyphs
 
-SMALL, LARGE = (80, 24), (120, 40)
+TINY, SMALL, LARGE = (60, 20), (80, 24), (120, 40)
 
 
 def screen_text(app: EvenarmApp) -> str:
@@ -50,7 +50,7 @@ def shown(moments: Iterable[str], size: tuple[int, int], glyphs: Glyphs = FULL) 
     return asyncio.run(session())
 
 
-@pytest.mark.parametrize("size", [SMALL, LARGE], ids=["80x24", "120x40"])
+@pytest.mark.parametrize("size", [TINY, SMALL, LARGE], ids=["60x20", "80x24", "120x40"])
 def test_screens(size: tuple[int, int], snapshot) -> None:
     for at, text in shown(VIEWS, size).items():
         assert len(text.splitlines()) == size[1]
@@ -90,7 +90,36 @@ def test_without_colour_the_screen_says_the_same(monkeypatch) -> None:
     moments = ["caution", "located", "rejected"]
     coloured = shown(moments, SMALL)
     monkeypatch.setenv("NO_COLOR", "1")
-    assert shown(moments, SMALL) == coloured
+    for at, text in shown(moments, SMALL).items():
+        assert "F4" not in text  # a key that would do nothing is not offered
+        assert text.splitlines()[:-1] == coloured[at].splitlines()[:-1]
+
+
+# What stands on its own at 60 columns, and must not lose its unit or its end there.
+WHOLE = {
+    "rough": ["ZERO roughly located", "stage    11.712 10 mm", "run-up"],
+    "before": ["ZERO only expected"],
+    "located": ["ZERO stage reading, measured", "13.218 401(12) mm"],
+    "caution": ["Ctrl+Q leave", "± 4.8 mm stage"],
+    "lost": ["NOT TRUSTED", "7.500 00 mm", "Y yes  N no"],
+    "runaway": ["last reading 7.677 66 mm, not trusted", "controller", "MAY STILL MOVE"],
+    "held": ["where: /home", "why: held", "2024-05-06 07:08:09", "mend: end", "in bench.toml"],
+    "accepted": ["journal head 41d07be2c0ff5a93", "Q leaves."],
+    "rejected": ["100 nm allows", "Q leaves; run again from the shell."],
+}
+
+
+def test_what_matters_is_whole_in_a_small_terminal() -> None:
+    for at, text in shown(WHOLE, TINY).items():
+        for words in WHOLE[at]:
+            assert words in text, f"{at}:\n{text}"
+        assert "left at 7." not in text
+
+
+def test_a_position_that_is_not_trusted_is_nowhere_firm() -> None:
+    for at, text in shown(["lost", "runaway"], SMALL).items():
+        assert "left at" not in text, at
+        assert "NOT TRUSTED" in text, at
 
 
 @pytest.mark.parametrize("size", [(40, 10), (20, 5), (200, 60)])

@@ -12,8 +12,10 @@ from rich.cells import cell_len
 from rich.color import Color, ColorSystem
 from test_tui_fake import ASKED, BEFORE, FOUND, SCANNING, VIEWS, ZERO_M
 
+from bench.procedure.live import StepView
 from bench.tui import figures, letters
 from bench.tui.glyphs import ASCII, FULL, glyphs_for
+from bench.tui.next_view import end_rows, next_text
 from bench.tui.palette import PALETTES, contrast
 from bench.tui.ruler import ruler, ruler_place
 from bench.tui.scan_view import scan_text
@@ -23,11 +25,11 @@ from bench.tui.views import (
     bench_text,
     foot_text,
     head_text,
-    next_text,
     question_lines,
     steps_text,
     zero_text,
 )
+from bench.tui.words import wrapped
 
 
 def scene(at: str, **changes: object) -> Scene:
@@ -266,6 +268,36 @@ def test_a_scan_says_where_the_zero_is_that_it_does_not_hold() -> None:
     assert "zero lies left of this" in scan_text(shown, 80, 10).plain
 
 
+def _height(signal: np.ndarray) -> float:
+    """The share of the picture's height that the readings take."""
+    x = np.linspace(0.0, 1.0, signal.size)
+    window = window_of(x, signal)
+    assert window is not None
+    return float(np.ptp(signal)) / (window.high - window.low)
+
+
+@pytest.mark.parametrize(("level", "sigma"), [(1.0, 0.005), (0.02, 0.005), (0.0, 1e-3), (3.0, 0.1)])
+def test_plain_noise_is_a_thin_band(level: float, sigma: float) -> None:
+    random = np.random.default_rng(5)
+    assert _height(level + random.normal(0.0, sigma, 3000)) < 0.5
+
+
+@pytest.mark.parametrize("sigma", [0.0, 0.002, 0.02])
+@pytest.mark.parametrize("reach", [1.0, 1.25, 1.5, 2.0, 3.0, 6.0, 30.0])
+def test_a_packet_fills_the_picture(reach: float, sigma: float) -> None:
+    random = np.random.default_rng(6)
+    x = np.linspace(-reach, reach, 3000)
+    signal = 1.0 + 0.4 * np.exp(-(x**2) / 2) * np.cos(40 * x)
+    assert _height(signal + random.normal(0.0, sigma, x.size)) > 0.9
+
+
+@pytest.mark.parametrize("per_fringe", [3.3, 8.0, 40.0])
+def test_steady_fringes_fill_the_picture(per_fringe: float) -> None:
+    random = np.random.default_rng(7)
+    phase = 2 * np.pi * np.arange(3000) / per_fringe
+    assert _height(1.0 + 0.4 * np.cos(phase) + random.normal(0.0, 0.01, 3000)) > 0.9
+
+
 # --- parts ---------------------------------------------------------------------------------------
 
 
@@ -317,7 +349,8 @@ def test_stage_and_opd_are_told_apart() -> None:
     assert "measured" in text
     expected = zero_text(scene("scanning"), 60).plain
     assert "only expected" in expected
-    assert "± 61 um stage" in expected
+    assert "± 61 µm stage" in expected
+    assert "roughly located" in zero_text(scene("rough"), 60).plain
 
 
 def test_the_zero_is_written_with_its_uncertainty() -> None:
@@ -362,9 +395,11 @@ def test_where_the_stage_is_in_words() -> None:
     assert "MOVING" in bench_text(scene("scanning"), 26).plain
     assert "at rest" in bench_text(scene("accepted"), 26).plain
     lost = bench_text(scene("fault"), 26).plain
-    assert "UNKNOWN" in lost
+    assert "NOT TRUSTED" in lost
     assert "SATURATED" in lost
-    assert "13.217" not in lost.split("stage", 1)[1]
+    assert "reads    13.217 40 mm" in lost
+    assert "at rest" not in bench_text(scene("runaway"), 26).plain
+    assert "UNKNOWN" in bench_text(scene("held"), 26).plain
 
 
 @pytest.mark.parametrize(
@@ -373,7 +408,8 @@ def test_where_the_stage_is_in_words() -> None:
         ("accepted", ["residual OPD 17(31) nm", "stage left at 13.218 41 mm"]),
         ("rejected", ["the two scans disagree"]),
         ("not-found", ["no packet within", "residual OPD not measured"]),
-        ("fault", ["stage position UNKNOWN", "did not answer"]),
+        ("fault", ["last reading 13.217 40 mm, not trusted", "did not answer"]),
+        ("held", ["stage position UNKNOWN"]),
         ("stopped", ["software stop pressed"]),
     ],
 )
@@ -395,7 +431,7 @@ def test_a_run_that_is_on_says_what_to_do() -> None:
 
 
 def test_the_journal_gives_way_to_the_bench_name() -> None:
-    assert "journal 9f3c21ab" in head_text(scene("scanning"), 120).plain
+    assert "journal 9f3c21ab77aa01d2 " in head_text(scene("scanning"), 120).plain
     narrow = head_text(scene("scanning"), 80).plain
     assert "path-equalisation" in narrow
     assert "SIMULATED" in narrow
@@ -409,3 +445,66 @@ def test_every_caution_is_there_word_for_word() -> None:
     words = " ".join(row[2:] for row in rows)
     for line in ASKED.question.lines:
         assert line in words
+
+
+@pytest.mark.parametrize("width", [24, 34, 50, 76])
+def test_no_reason_is_cut(width: int) -> None:
+    for at in ("rejected", "fault", "runaway", "held"):
+        told = " ".join(row.strip() for row in end_rows(scene(at), width))
+        view = VIEWS[at]
+        for words in view.error_lines or (view.reason, view.next_action):
+            assert words.replace(" ", "") in told.replace(" ", ""), at
+
+
+def test_a_reason_too_long_for_the_screen_can_be_scrolled() -> None:
+    long = dataclasses.replace(VIEWS["rejected"], reason=" ".join(f"word{k}" for k in range(200)))
+    shown = dataclasses.replace(scene("rejected"), view=long)
+    seen = ""
+    for scrolled in range(60):
+        text = next_text(dataclasses.replace(shown, scrolled=scrolled), 60, 12).plain
+        assert len(text.splitlines()) == 12
+        seen += text
+    assert all(f"word{k}" in seen for k in range(200))
+    assert "more below" not in text
+
+
+@given(st.integers(20, 60), st.floats(0, 400))
+def test_no_unit_leaves_its_number(width: int, at_mm: float) -> None:
+    words = f"moving to {at_mm:.4f} mm, overshoot 12.5 µm before 13.218 401(12) mm, ± 3 nm"
+    rows = wrapped(words, width, FULL)
+    assert " ".join(rows) == words
+    assert not [row for row in rows if row.split()[0].rstrip(",") in ("mm", "µm", "nm", "401(12)")]
+
+
+def test_what_is_cut_ends_with_a_mark() -> None:
+    assert wrapped("one two three four", 9, FULL, most=1) == ["one two …"]
+    assert wrapped("one two", 9, FULL, most=1) == ["one two"]
+    details = "a packet of white light is looked for where the red one was seen before, with care"
+    view = dataclasses.replace(SCANNING, steps=(StepView("Find the packet", "now", details),))
+    rows = steps_text(dataclasses.replace(scene("scanning"), view=view), 22, 5).plain
+    assert rows.splitlines()[-1].endswith("…")
+
+
+def test_micrometres_are_written_as_the_terminal_can() -> None:
+    for at in VIEWS:
+        for text in parts(scene(at), 80).values():
+            assert " um" not in text
+    assert "1 um" in zero_text(scene("scanning", glyphs=ASCII), 60).plain
+    assert FULL.text("5 um of the um") == "5 µm of the um"
+
+
+def test_a_question_ends_with_a_question() -> None:
+    ends = {at: question_lines(scene(at), 60)[-1] for at in ("confirm", "lost", "caution")}
+    assert ends["confirm"].startswith("Is all of this so?")
+    assert ends["lost"].startswith("May the stage be homed now?")
+    assert "?" not in ends["caution"]
+
+
+def test_the_foot_offers_only_what_works_and_whole() -> None:
+    assert "Y yes  N no" in foot_text(scene("confirm"), 60).plain
+    assert "Y yes  N no" in foot_text(scene("scanning", asking_to_leave=True), 60).plain
+    assert "Y yes" not in foot_text(scene("scanning"), 80).plain
+    assert "F4" not in foot_text(scene("scanning", no_colour=True), 120).plain
+    for at in VIEWS:
+        for width in (52, 60, 80):
+            assert foot_text(scene(at), width).plain.rstrip().endswith("leave")

@@ -15,17 +15,19 @@ from rich.text import Text
 from textual.app import App, ComposeResult
 from textual.binding import Binding, BindingType
 from textual.containers import Horizontal, Vertical
+from textual.events import Key
 from textual.theme import Theme
 from textual.widgets import Input
 
 from bench.errors import EvenarmError, printable
 from bench.tui.control import RunControl
 from bench.tui.glyphs import FULL, Glyphs
+from bench.tui.next_view import BAR_ROWS, end_rows, next_text
 from bench.tui.palette import PALETTES, Palette
 from bench.tui.panels import Panel, QuestionPanel
 from bench.tui.scan_view import scan_text
 from bench.tui.scene import Scene
-from bench.tui.views import bench_text, foot_text, head_text, next_text, steps_text, zero_text
+from bench.tui.views import bench_text, foot_text, head_text, steps_text, zero_text
 
 __all__ = ["EvenarmApp"]
 
@@ -82,7 +84,7 @@ class EvenarmApp(App[int]):
     #head { height: 1; }
     #next { height: 4; }
     #body { height: 1fr; }
-    #left { width: 1fr; max-width: 38; padding: 0 1 0 1; }
+    #left { width: 1fr; min-width: 24; max-width: 38; padding: 0 1 0 1; }
     #right { width: 2fr; padding: 0 1 0 1; }
     #steps { height: 1fr; }
     #bench { height: 8; }
@@ -121,14 +123,16 @@ class EvenarmApp(App[int]):
         self._leave_when_done: int | None = None
         self._leave_now: int | None = None
         self.failure: BaseException | None = None
-        self.scene = Scene(control.view(), glyphs=glyphs)
+        self.scene = Scene(control.view(), glyphs=glyphs, no_colour=self.no_color)
         self._look()
 
     # --- what is shown ---------------------------------------------------------------------------
 
     def compose(self) -> ComposeResult:
         yield Panel(lambda width, _: head_text(self.scene, width), id="head")
-        yield Panel(lambda width, _: next_text(self.scene, width), id="next", grows=True)
+        yield Panel(
+            lambda width, _: next_text(self.scene, width, self._most), id="next", grows=True
+        )
         with Horizontal(id="body"):
             with Vertical(id="left"):
                 yield Panel(lambda w, h: steps_text(self.scene, w, h), id="steps")
@@ -139,8 +143,14 @@ class EvenarmApp(App[int]):
                 yield QuestionPanel(lambda: self.scene)
         yield Panel(lambda width, _: foot_text(self.scene, width), id="foot")
 
+    @property
+    def _most(self) -> int:
+        """Rows that the outcome and its reason may take: all between the first and the last."""
+        return max(BAR_ROWS + 1, self.size.height - 2)
+
     def _zero(self, width: int, _: int) -> Text:
-        compact = self.scene.question is not None and self.size.height < 32
+        body = self.size.height - 2 - self.screen_stack[0].query_one("#next").size.height
+        compact = body < (26 if self.scene.question is not None else 14)
         return zero_text(self.scene, width, compact=compact)
 
     def on_mount(self) -> None:
@@ -211,9 +221,20 @@ class EvenarmApp(App[int]):
         self.refresh_scene()
 
     def action_begin(self) -> None:
-        if self.scene.phase != "ready":
-            return
-        self._attempt(self._control.start)
+        if self.scene.phase == "ready":
+            self._attempt(self._control.start)
+        else:
+            self._wants_yes_or_no()
+
+    def on_key(self, event: Key) -> None:
+        """A key that means nothing here; where yes or no is asked for, it is told."""
+        self._wants_yes_or_no()
+
+    def _wants_yes_or_no(self) -> None:
+        asked = self.scene.question
+        confirm = self.scene.phase == "ask" and asked is not None and asked.kind == "confirm"
+        if confirm or self.scene.phase == "leaving":
+            self._remark("Press Y or N.")
 
     def action_say(self, yes: bool) -> None:
         """Yes or no: to leaving where that is asked, else to the question that is open."""
@@ -285,6 +306,8 @@ class EvenarmApp(App[int]):
         self.refresh_scene()
 
     def action_colours(self) -> None:
+        if self.scene.no_colour:
+            return
         names = [palette.name for palette in PALETTES]
         index = (names.index(self.theme) + 1) % len(names)
         self.theme = names[index]
@@ -295,6 +318,11 @@ class EvenarmApp(App[int]):
         if self.scene.question is not None:
             self.screen_stack[0].query_one(QuestionPanel).scroll_by(rows)
             self.scene = replace(self.scene, note="")
+            self.refresh_scene()
+        elif self.scene.phase == "done":
+            beyond = len(end_rows(self.scene, self.size.width)) + BAR_ROWS - self._most
+            scrolled = max(0, min(self.scene.scrolled + rows, beyond))
+            self.scene = replace(self.scene, scrolled=scrolled)
             self.refresh_scene()
 
     def action_page_words(self, pages: int) -> None:

@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass
 
 __all__ = ["ASCII", "FULL", "Glyphs", "glyphs_for"]
+
+_MICRO = re.compile(r"(?<=[\d)] )um\b")  # programs write um, people read µm
 
 _PLAIN = {
     "±": "+-",
@@ -55,7 +58,7 @@ class Glyphs:
     def text(self, words: str) -> str:
         """``words`` as this terminal can show them."""
         if self.braille:
-            return words
+            return _MICRO.sub("µm", words)
         plain = "".join(_PLAIN.get(ch, ch) for ch in words)
         return plain.encode("ascii", "replace").decode("ascii")
 

@@ -12,7 +12,8 @@ from textual.events import Resize
 from textual.widgets import Input, Static
 
 from bench.tui.scene import Scene
-from bench.tui.views import question_hint, question_lines, title_row
+from bench.tui.views import question_hint, question_lines
+from bench.tui.words import fitted, title_row
 
 if TYPE_CHECKING:
     from bench.procedure.live import Question
@@ -83,7 +84,10 @@ class QuestionPanel(Vertical):
 
     def _title(self, width: int, _: int) -> Text:
         asked = self._scene().question
-        return title_row((asked.title if asked else "").upper()[: width - 2], width, self._scene())
+        title = self._scene().glyphs.text(asked.title if asked else "").upper()
+        return title_row(
+            fitted(title, width - 2, self._scene().glyphs).rstrip(), width, self._scene()
+        )
 
     def _words(self, width: int, _: int) -> Text:
         scene = self._scene()

@@ -63,7 +63,7 @@ def ruler(
     for length_m in named:
         if length_m > widest_m:
             continue
-        name = round_length(length_m)
+        name = glyphs.text(round_length(length_m))
         place = ruler_place(length_m, widest_m, reach)
         starts = [
             max(0, min(row_width - len(name), centre - len(name) // 2))

@@ -5,13 +5,12 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from rich.cells import cell_len
 from rich.text import Text
 
 from bench.tui.figures import level
 from bench.tui.scene import Scene
 from bench.tui.trace import Window, draw, window_of
-from bench.tui.views import title_row
+from bench.tui.words import title_row
 
 __all__ = ["scan_text"]
 
@@ -78,9 +77,7 @@ def scan_text(scene: Scene, width: int, height: int) -> Text:
     signal = view.trace_signal[np.isfinite(view.trace_signal)]
     low, high = float(signal.min()), float(signal.max())
     aside = f"{view.trace_label}  {level(low, '')} to {level(high, view.detector_unit)}".strip()
-    head = title_row("SCAN", width, scene, aside)
-    if cell_len(aside) + 6 > width:
-        head = title_row("SCAN", width, scene, view.trace_label)
+    head = title_row("SCAN", width, scene, aside, view.trace_label)
     picture = None if view.located is None or not view.located.found else view.located.picture
     envelope = None
     if picture is not None:

@@ -29,7 +29,9 @@ class Scene:
     """The run's own snapshot, and what the screen adds: what was pressed, and how to draw.
 
     ``question`` is the one to be answered now; an answer that is on its way closes it at once.
-    ``note`` is a short remark on the last key, such as what is missing in an answer.
+    ``note`` is a short remark on the last key, such as what is missing in an answer. ``scrolled``
+    counts the rows of a long reason that lie above the first one shown. ``no_colour``: whoever
+    started the program asked for none.
     """
 
     view: LiveView
@@ -40,6 +42,8 @@ class Scene:
     question: Question | None = None
     note: str = ""
     more_below: bool = False
+    scrolled: int = 0
+    no_colour: bool = False
     glyphs: Glyphs = FULL
     palette: Palette = DARK
 

@@ -21,6 +21,11 @@ BoolArray = NDArray[np.bool_]
 _BRAILLE_BITS = np.array([[0x01, 0x08], [0x02, 0x10], [0x04, 0x20], [0x40, 0x80]])
 _ASCII_MARKS = np.array([" ", "'", ".", ":"])
 _FLAT = 1e-12  # relative; below it, rounding is all that tells two values apart
+_LEAST_OF_LEVEL = 0.05  # of the level: ripple below it is not blown up to fill the picture
+_NOISE_SPAN = 20.0  # standard deviations that the picture spans where all is noise
+_FRINGES_BELOW = 4.5  # peak to peak over standard deviation: a sine has 2.8, noise has 5 and more
+_ALIKE = 1.5  # loud over quiet parts, in standard deviations: noise is alike everywhere
+_PARTS = 16
 _LONGEST_LINK = 12  # columns of dots that a straight line between two readings may bridge
 
 
@@ -43,7 +48,12 @@ class Cells:
 
 
 def window_of(x: FloatArray, signal: FloatArray) -> Window | None:
-    """The smallest window with all finite readings in it and a little room above and below."""
+    """A window with all finite readings in it and a little room above and below.
+
+    It fits the readings closely where there are fringes. Plain noise must not look like them: the
+    window spans no less than a twentieth of the level, and no less than 20 standard deviations of
+    readings that scatter alike everywhere and are no steady fringes.
+    """
     usable = np.isfinite(x) & np.isfinite(signal)
     if not usable.any():
         return None
@@ -53,7 +63,22 @@ def window_of(x: FloatArray, signal: FloatArray) -> Window | None:
     left, right = left - across * _apart(left), right + across * _apart(right)
     flat = high - low <= _FLAT * max(abs(low), abs(high))
     room = _apart(high) if flat else 0.04 * (high - low)
+    if not flat:
+        room = max(room, 0.5 * (_least_span(x[usable], signal[usable]) - (high - low)))
     return Window(left, right, low - room, high + room)
+
+
+def _least_span(x: FloatArray, signal: FloatArray) -> float:
+    """What the picture spans at least, upwards; see ``window_of``."""
+    level = _LEAST_OF_LEVEL * abs(float(np.median(signal)))
+    if signal.size < 20 * _PARTS:
+        return level
+    parts = np.array_split(signal[np.argsort(x, kind="stable")], _PARTS)
+    scatter = np.array([float(part.std()) for part in parts])
+    quiet, loud = (float(value) for value in np.quantile(scatter, (0.25, 0.9)))
+    sigma = float(np.median(scatter))
+    noise = loud <= _ALIKE * quiet and float(np.ptp(signal)) > _FRINGES_BELOW * sigma
+    return max(level, _NOISE_SPAN * sigma) if noise else level
 
 
 def _apart(value: float) -> float:

@@ -7,10 +7,9 @@ bench doing, what do I do next.
 from __future__ import annotations
 
 import math
-import textwrap
-from collections.abc import Sequence
+from typing import TYPE_CHECKING
 
-from rich.cells import cell_len, set_cell_size
+from rich.cells import cell_len
 from rich.text import Text
 
 from bench.errors import printable
@@ -18,48 +17,21 @@ from bench.tui import letters
 from bench.tui.figures import clock, level, position, round_length
 from bench.tui.glyphs import Glyphs
 from bench.tui.ruler import ruler
-from bench.tui.scene import OUTCOME_WORDS, Scene
+from bench.tui.scene import Scene
+from bench.tui.words import first_that_fits, fitted, title_row, wrapped
+
+if TYPE_CHECKING:
+    from bench.procedure.live import Question
 
 __all__ = [
     "bench_text",
     "foot_text",
     "head_text",
-    "next_text",
     "question_hint",
     "question_lines",
     "steps_text",
-    "title_row",
     "zero_text",
 ]
-
-_AFTERWARDS = {
-    "accepted": "The arms are even. Leave the stage as it is.",
-    "rejected": "Read the reason, mend it and run again.",
-    "not found": "Look at the light and the overlap, or widen [expect] in bench.toml.",
-    "stopped": "Look where the stage stands before you go on.",
-    "fault": "Mend what is named here before you run again.",
-}
-
-
-def fitted(words: str, width: int, glyphs: Glyphs) -> str:
-    """``words`` in exactly ``width`` columns, with a mark where something was cut off."""
-    words = glyphs.text(printable(words, 2000))
-    if cell_len(words) > width > 1:
-        return set_cell_size(words, width - 1) + glyphs.text("…")
-    return set_cell_size(words, max(width, 0))
-
-
-def title_row(title: str, width: int, scene: Scene, aside: str = "") -> Text:
-    """The heading of a part: its name, a remark, and a line to the edge."""
-    glyphs, palette = scene.glyphs, scene.palette
-    row = Text(glyphs.text(f"{title} "), style=f"bold {palette.text}")
-    room = width - cell_len(row.plain)
-    remark = glyphs.text(printable(aside))
-    if remark and cell_len(remark) < room:
-        row.append(f"{remark} ", style=palette.quiet)
-        room -= cell_len(remark) + 1
-    row.append(glyphs.rule * max(0, room), style=palette.quiet)
-    return row
 
 
 def _filled(share: float, width: int, glyphs: Glyphs) -> str:
@@ -74,12 +46,13 @@ def head_text(scene: Scene, width: int) -> Text:
     if view.remaining_s is not None and not scene.finished:
         times += f", ~{clock(view.remaining_s)} left"
     names = glyphs.text(f"{printable(view.bench_name, 80)} · {printable(view.procedure, 80)}")
-    right = f"journal {printable(view.head[:8])}   {times} " if view.head else f"{times} "
     banner = " SIMULATED " if view.simulated else ""
-    room = width - cell_len(right) - len(banner) - 3
-    if cell_len(names) > room:  # the journal's head gives way first
-        right = f"{times} "
+    for digits in (16, 8, 0):  # the journal's head gives way first
+        head = printable(view.head[:digits])
+        right = f"journal {head}   {times} " if head else f"{times} "
         room = width - cell_len(right) - len(banner) - 3
+        if cell_len(names) <= room:
+            break
     row = Text(" ", style=palette.text)
     row.append(fitted(names, min(cell_len(names), max(room, 0)), glyphs), style="bold")
     row.append(" ")
@@ -89,88 +62,6 @@ def head_text(scene: Scene, width: int) -> Text:
     row.append(right, style=palette.quiet)
     row.truncate(width)
     return row
-
-
-def _what_next(scene: Scene) -> tuple[str, str, str]:
-    """A word for across the room, the instruction, and a remark below it."""
-    view = scene.view
-    asked = scene.question
-    if scene.phase == "leaving":
-        return "LEAVE?", "Y: stop the run and leave.  N: stay.", "The run goes on until you answer."
-    if scene.phase == "not begun":
-        return "STOPPED", "Nothing was begun. Q leaves.", ""
-    if scene.phase == "stopping":
-        return "STOPPING", "Software stop asked. Wait until the stage is at rest.", ""
-    if scene.phase == "ready":
-        return "START", "Press Enter to begin the run.", scene.note
-    if asked is not None and scene.phase == "ask":
-        if asked.kind == "acknowledge":
-            return "READ", "Read it all, type your name, press Enter.", scene.note
-        return "ANSWER", "Y: yes.  N: no.", scene.note
-    return "WAIT", view.next_action or "Nothing to do: the bench is at work.", ""
-
-
-def _left_at(scene: Scene) -> str:
-    view = scene.view
-    if view.stage_position_m is None or not view.stage_known:
-        return "stage position UNKNOWN"
-    return f"stage left at {position(view.stage_position_m)}"
-
-
-def _residual(scene: Scene) -> str:
-    from bench.quantities import show_length
-
-    view = scene.view
-    if view.residual_opd_m is None:
-        return "residual OPD not measured"
-    shown = show_length(view.residual_opd_m, view.residual_opd_standard_uncertainty_m)
-    return f"residual OPD {shown}"
-
-
-def _bar(word: str, beside: Sequence[str], width: int, style: str, glyphs: Glyphs) -> list[Text]:
-    """Four rows: a large word, clear of the edges, and up to four lines beside it."""
-    drawn = [*letters.large(word, max(1, width - 2), glyphs, lower=True), ""]
-    start = max(cell_len(row) for row in drawn) + 4
-    rows = []
-    for left, words in zip(drawn, [*beside, "", "", "", ""], strict=False):
-        row = Text(f" {set_cell_size(left, start - 1)}", style=f"bold {style}")
-        row.append(fitted(words, max(0, width - start), glyphs))
-        row.truncate(width, pad=True)
-        rows.append(row)
-    return rows
-
-
-def next_text(scene: Scene, width: int) -> Text:
-    """What to do next: four rows, and up to three more with the reason once a run is over."""
-    palette, glyphs, view = scene.palette, scene.glyphs, scene.view
-    calm = f"{palette.calm_text} on {palette.calm_bar}"
-    if scene.phase == "done":
-        outcome = view.outcome or "fault"
-        colour = {"accepted": palette.good, "stopped": palette.warn}.get(outcome, palette.bad)
-        style = f"{palette.background} on {colour}"
-        word = OUTCOME_WORDS.get(outcome, glyphs.text(printable(outcome, 20)).upper())
-        facts = ["", _residual(scene), _left_at(scene), "Q leaves."]
-        rows = _bar(word, facts, width, style, glyphs)
-        advice = " ".join(filter(None, (view.next_action or _AFTERWARDS.get(outcome, ""),)))
-        words = [f"Reason: {printable(view.reason)}"] if view.reason else []
-        for line in [*words, f"Next: {advice}"] if advice else words:
-            wrapped = textwrap.wrap(glyphs.text(line), max(10, width - 2))[:2]
-            for part in wrapped:
-                row = Text(f" {part}", style=calm)
-                row.truncate(width, pad=True)
-                rows.append(row)
-        return Text("\n").join(rows)
-    word, instruction, remark = _what_next(scene)
-    act = scene.phase in ("ready", "ask", "leaving")
-    style = f"{palette.act_text} on {palette.act_bar}" if act else calm
-    if scene.phase in ("stopping", "not begun"):
-        style = f"{palette.background} on {palette.warn}"
-    start = letters.large_width(word, glyphs) + 4
-    lines = textwrap.wrap(glyphs.text(printable(instruction)), max(10, width - start))[:3]
-    lines += [remark] if remark else []
-    if len(lines) < 4:
-        lines.insert(0, "")
-    return Text("\n").join(_bar(word, lines, width, style, glyphs))
 
 
 def steps_text(scene: Scene, width: int, height: int) -> Text:
@@ -184,24 +75,26 @@ def steps_text(scene: Scene, width: int, height: int) -> Text:
     }
     rows: list[Text] = []
     here = 0
+    room = max(0, height - 1)
     for step in scene.view.steps:
         mark, style = marks[step.state]
-        if step.state in ("now", "failed"):
-            here = len(rows)
         row = Text(f"{mark} ", style=style)
         row.append(fitted(step.title, width - cell_len(mark) - 1, glyphs))
         rows.append(row)
-        if step.detail and step.state in ("now", "failed"):
+        if step.state in ("now", "failed"):
+            here = len(rows) - 1
             indent = " " * (cell_len(mark) + 1)
-            detail = glyphs.text(printable(step.detail))
-            for part in textwrap.wrap(detail, max(8, width - len(indent)))[:2]:
-                rows.append(Text(indent + part, style=palette.quiet))
-    room = max(0, height - 1)
+            most = max(1, min(8, room - 2))
+            detail = wrapped(step.detail, width - len(indent), glyphs, most=most)
+            rows += [Text(indent + part, style=palette.quiet) for part in detail]
+            last = len(rows) - 1
     if len(rows) > room > 0:
-        first = max(0, min(here - room // 2, len(rows) - room))
+        middle = (here + last) // 2 if here else 0
+        first = max(0, min(middle - room // 2, here, len(rows) - room))
+        first = max(first, min(here, last + 2 - room)) if here else first
         below = len(rows) - first - room
         rows = rows[first : first + room]
-        if below:
+        if below > 0 and room > 2:
             rows[-1] = Text(f"{glyphs.down} {below + 1} more", style=palette.quiet)
     return Text("\n").join([title_row("STEPS", width, scene), *rows])
 
@@ -211,39 +104,46 @@ def bench_text(scene: Scene, width: int) -> Text:
     view, glyphs, palette = scene.view, scene.glyphs, scene.palette
     rows = [title_row("BENCH", width, scene)]
     doing = view.doing or ("idle" if not view.stage_moving else "moving")
-    wrapped = [*textwrap.wrap(glyphs.text(printable(doing)), max(8, width))[:2], ""][:2]
-    wrapped = [row for row in wrapped if row or not scene.finished]
-    rows += [Text(fitted(row, width, glyphs).rstrip(), style=palette.text) for row in wrapped]
+    most = 2 if width >= 30 else 3
+    told = wrapped(doing, width, glyphs, most=most)
+    told += [""] * (0 if scene.finished else most - len(told))  # nothing jumps while a run goes on
+    rows += [Text(row, style=palette.text) for row in told]
     if view.progress is not None and not scene.finished:
         share = f" {100 * max(0.0, min(1.0, view.progress)):3.0f} %"
         bar = _filled(view.progress, width - len(share), glyphs)
         rows.append(Text(bar + share, style=palette.signal))
-    elif not scene.finished:  # so that nothing jumps while a run goes on
+    elif not scene.finished:
         rows.append(Text(""))
 
-    def line(label: str, words: str, style: str) -> None:
-        row = Text(f"{label:<9}", style=palette.quiet)
-        row.append(fitted(words, width - 9, glyphs).rstrip(), style=style)
+    def line(label: str, style: str, *variants: str) -> None:
+        start = min(9, max(len(label) + 1, width - max(map(cell_len, variants))))
+        row = Text(f"{label:<{start}}", style=palette.quiet)
+        row.append(first_that_fits(variants, width - start, glyphs), style=style)
+        row.truncate(width)
         rows.append(row)
 
-    if not view.stage_known or view.stage_position_m is None:
-        line("stage", "UNKNOWN", f"bold {palette.bad}")
-        line("", "MOVING" if view.stage_moving else "", f"bold {palette.warn}")
+    still = "MOVING" if view.stage_moving else "at rest"
+    still = still if view.at_rest else "MAY STILL MOVE"
+    moves = view.stage_moving or not view.at_rest
+    where_m = view.stage_position_m
+    if where_m is None:
+        line("stage", f"bold {palette.bad}", "UNKNOWN")
+        still = still if moves else ""
     else:
-        line("stage", position(view.stage_position_m), f"bold {palette.text}")
-        moving = view.stage_moving
-        line(
-            "",
-            "MOVING" if moving else "at rest",
-            f"bold {palette.warn if moving else palette.text}",
-        )
-    line("source", view.source or "none yet", palette.text)
+        places = (position(where_m), f"{where_m * 1e3:.3f} mm", round_length(where_m))
+        if view.position_trusted and view.stage_known and view.at_rest:
+            line("stage", f"bold {palette.text}", *places)
+        else:
+            line("stage", f"bold {palette.bad}", "NOT TRUSTED")
+            line("reads", palette.quiet, *places)
+    line("", f"bold {palette.warn if moves else palette.text}", still)
+    line("source", palette.text, view.source or "none yet")
     if view.detector_level is None:
-        line("detector", "no reading yet", palette.quiet)
+        line("detector", palette.quiet, "no reading yet", "none yet")
     elif view.detector_saturated:
-        line("detector", "SATURATED", f"bold {palette.bad}")
+        line("detector", f"bold {palette.bad}", "SATURATED")
     else:
-        line("detector", level(view.detector_level, view.detector_unit), palette.text)
+        line("detector", palette.text, level(view.detector_level, view.detector_unit))
     return Text("\n").join(rows)
 
 
@@ -252,15 +152,16 @@ def _sureness(scene: Scene, width: int) -> Text:
     view, palette, glyphs = scene.view, scene.palette, scene.glyphs
     half = view.half_width_m
     if half is None or not math.isfinite(half):
-        return Text(fitted("how sure: not known", width, glyphs), style=palette.quiet)
-    row = Text(style=palette.quiet)
-    for amount, axis in ((half, "stage"), (half * abs(view.opd_per_m), "OPD")):
-        row.append(glyphs.text(f"± {round_length(amount)}"), style=f"bold {palette.text}")
-        row.append(f" {axis}    ")
-    row.append("95 %")
+        words = first_that_fits(("how sure: not known", "not known"), width, glyphs)
+        return Text(words, style=palette.quiet)
+    stage = f"± {round_length(half)}"
+    opd = f"± {round_length(half * abs(view.opd_per_m))}"
+    both = f"{stage} stage    {opd} OPD    95 %"
+    variants = [both, both.replace("    ", "  "), f"{stage} stage  {opd} OPD", f"{stage} stage"]
     if view.accept_residual_opd_m is not None:
-        row.append(f"    {glyphs.goal} goal")
-    row.truncate(width)
+        variants.insert(0, f"{both}    {glyphs.goal} goal")
+    row = Text(first_that_fits((*variants, stage), width, glyphs), style=palette.quiet)
+    row.highlight_words([glyphs.text(stage), glyphs.text(opd)], f"bold {palette.text}")
     return row
 
 
@@ -269,21 +170,24 @@ def zero_text(scene: Scene, width: int, *, compact: bool = False) -> Text:
     from bench.quantities import show
 
     view, palette, glyphs = scene.view, scene.palette, scene.glyphs
+    asides: tuple[str, ...]
     if scene.measured and view.zero_m is not None:
-        aside = "stage reading, measured"
+        asides = ("stage reading, measured", "measured")
         u_m = view.zero_standard_uncertainty_m
         number, unit = show(view.zero_m * 1e3, (u_m or 0.0) * 1e3, "mm").rsplit(" ", 1)
     elif view.zero_m is not None:
-        aside = "stage reading, only expected so far"
+        asides = ("stage reading, only expected so far", "only expected", "expected")
+        if view.roughly_located:
+            asides = ("stage reading, roughly located by a coarse scan", "roughly located", "rough")
         number, unit = f"{view.zero_m * 1e3:.3f}".rstrip("0").rstrip("."), "mm"
         half = view.half_width_m
         if half is not None and math.isfinite(half) and not compact:
             digits = max(0, min(6, 1 - math.floor(math.log10(max(half * 1e3, 1e-9)))))
             number = f"{view.zero_m * 1e3:.{digits}f} ± {half * 1e3:.{digits}f}"
     else:
-        aside, number, unit = "stage reading", "?", ""
+        asides, number, unit = ("stage reading, not known", "not known"), "?", ""
     style = f"bold {palette.zero if scene.measured else palette.text}"
-    rows = [title_row("ZERO", width, scene, aside)]
+    rows = [title_row("ZERO", width, scene, *asides)]
     if compact:
         row = Text(glyphs.text(f"{number} {unit}"), style=style)
         row.append("   ")
@@ -296,6 +200,8 @@ def zero_text(scene: Scene, width: int, *, compact: bool = False) -> Text:
         cut = min((number.find(mark) for mark in "(±" if mark in number), default=len(number))
         head, tail = number[:cut].rstrip(), f"{number[cut:]} {unit}".strip()
     drawn = letters.large(head, width - len(tail) - 1, glyphs)
+    if not drawn[0]:  # no large figures here, so nothing is taken apart
+        drawn, tail = ["", first_that_fits((f"{number} {unit}",), width, glyphs), ""], ""
     for index, part in enumerate(drawn):
         last = index == (2 if drawn[2] else 1)
         words = glyphs.text(f"{part} {tail}" if last and tail else part)
@@ -311,17 +217,33 @@ def zero_text(scene: Scene, width: int, *, compact: bool = False) -> Text:
     return Text("\n").join(rows)
 
 
+def _asks(asked: Question) -> str:
+    """The sentence that yes or no answers."""
+    if asked.kind != "confirm":
+        return ""
+    if asked.id == "position":
+        return "May the stage be homed now?"
+    return "Is it in place?" if asked.id.startswith("source ") else "Is all of this so?"
+
+
 def question_lines(scene: Scene, width: int) -> list[str]:
-    """The words of the open question, wrapped; paragraphs begin with a mark."""
+    """The words of the open question, wrapped; paragraphs begin with a mark, what is asked ends."""
     asked = scene.question
     if asked is None:
         return []
     rows: list[str] = []
+    mark = scene.glyphs.text("·")
     for line in asked.lines:
-        words = scene.glyphs.text(printable(line, 2000))
-        wrapped = textwrap.wrap(words, max(10, width - 2)) or [""]
-        mark = scene.glyphs.text("·")
-        rows += [f"{mark if index == 0 else ' '} {part}" for index, part in enumerate(wrapped)]
+        told = wrapped(line, max(10, width - 2), scene.glyphs) or [""]
+        rows += [f"{mark if index == 0 else ' '} {part}" for index, part in enumerate(told)]
+    if asks := _asks(asked):
+        keys = "Y: yes.  N: no."
+        ends = (
+            [f"{asks}  {keys}"]
+            if len(asks) + len(keys) + 2 <= width
+            else [*wrapped(asks, width, scene.glyphs), keys]
+        )
+        rows += ["", *ends]
     return rows
 
 
@@ -338,19 +260,31 @@ def question_hint(scene: Scene, width: int) -> Text:
 
 
 def foot_text(scene: Scene, width: int) -> Text:
-    """The stop key first and always; then at most four short hints."""
+    """The stop key first and always; then at most five short hints, whole or not at all."""
     palette, glyphs = scene.palette, scene.glyphs
     row = Text(style=palette.quiet)
     row.append(" F8 SOFTWARE STOP ", style=f"bold {palette.stop_text} on {palette.stop_bar}")
     row.append(" or Ctrl+C ", style=palette.text)
+    asked = scene.question if scene.phase == "ask" else None
+    typing = scene.question is not None and scene.question.kind == "acknowledge"
+    # Key, what it does, and which goes first where there is no room for all of them.
     hints = []
     if scene.phase == "ready":
-        hints.append(("Enter", "start"))
-    if scene.question is not None and scene.phase == "ask":
-        hints.append((f"{glyphs.up}{' ' if not glyphs.braille else ''}{glyphs.down}", "scroll"))
-    typing = scene.question is not None and scene.question.kind == "acknowledge"
-    hints += [("F4", "colours"), ("Ctrl+Q" if typing else "Q", "leave")]
-    for key, what in hints:
+        hints.append(("Enter", "start", 0))
+    if scene.phase == "leaving" or (asked is not None and not typing):
+        hints += [("Y", "yes", 0), ("N", "no", 0)]
+    if asked is not None:
+        hints.append((f"{glyphs.up}{' ' if not glyphs.braille else ''}{glyphs.down}", "scroll", 1))
+    if not scene.no_colour:
+        hints.append(("F4", "colours", 2))
+    if scene.phase != "leaving":
+        hints.append(("Ctrl+Q" if typing else "Q", "leave", 0))
+    for dropped in (3, 2, 1, 0):
+        kept = [hint for hint in hints if hint[2] < dropped]
+        taken = sum(len(key) + len(what) + 3 for key, what, _ in kept)
+        if cell_len(row.plain) + taken <= width:
+            break
+    for key, what, _ in kept:
         row.append("  ")
         row.append(key, style=f"bold {palette.text}")
         row.append(f" {what}")
