@@ -43,9 +43,9 @@ def solve(
     prior = CUT_BEND_PRIOR if cut else BEND_PRIOR
     solution = _rounds(part, values, window.fit, window, known, per_m, prior)
     if wider is not None:
-        more = _rounds(part, values, wider.fit, wider, known, per_m, prior)
-        if known.light is not None or _explains_more(more.fit, solution.fit):
-            solution, window = more, wider
+        whole = _rounds(part, values, wider.fit, wider, known, per_m, prior)
+        if known.light is not None or _explains_more(whole.fit, solution.fit):
+            solution, window = whole, wider
     error = slow_position_error(part, solution.fit)
     if error is None:
         return solution

@@ -190,7 +190,8 @@ def lit(
     if inner < 4 or below + above <= 0:
         return None
     count = below + inner + above
-    frequency = float(unlit[0]) + step * (np.arange(count) - below)
+    away = step * (np.arange(count, dtype=np.float64) - below)
+    frequency = np.asarray(float(unlit[0]) + away, dtype=np.float64)
     first, last = (
         (0, count - 1) if light else _bright(part, values, centre, frequency, below, inner)
     )

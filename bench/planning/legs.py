@@ -10,7 +10,14 @@ from numpy.typing import NDArray
 from bench.planning.belief import Belief
 from bench.planning.kinematics import change_time, leg_time, longest_scan, readings_of, scan_ends
 from bench.planning.model import BenchFacts, Leg, Purpose, SourceFacts
-from bench.planning.sampling import Way, final_way, packet_fwhm_m, search_way
+from bench.planning.sampling import (
+    FINAL_ROOM,
+    Way,
+    final_room_m,
+    final_way,
+    packet_fwhm_m,
+    search_way,
+)
 from bench.planning.search import Cells, Segment, order_time, orders
 from bench.planning.wording import why_final, why_narrow, why_verify
 
@@ -30,7 +37,6 @@ __all__ = [
 ]
 
 # Common practice, no source, all of these:
-FINAL_ROOM = 3.0  # packet widths to each side: the whole packet, its lobes and some plain noise
 NARROW_ROOM = 1.5
 WINDOW_SDS = 2.576  # 99 % of a normal belief, which a final scan holds
 INTERVAL_SDS = 1.96
@@ -103,7 +109,7 @@ def narrow_enough(facts: BenchFacts, final: SourceFacts, width_m: float) -> bool
     Either the final scan is hardly longer than its packet needs, or the belief is as narrow as
     unknown glass lets a search make it, and a further search would only find the same again.
     """
-    packet = 2.0 * FINAL_ROOM * packet_fwhm_m(facts, final)
+    packet = 2.0 * final_room_m(facts, final)
     return width_m < max(2.0 * packet, 3.0 * WINDOW_SDS * facts.glass_shift_m)
 
 
@@ -116,7 +122,7 @@ def sd_between(facts: BenchFacts, source: SourceFacts, way: Way, following: Sour
 def final_legs(task: Task, low_m: float, high_m: float) -> list[Leg]:
     """Final scan and verify for a packet centred between two readings."""
     facts, source = task.facts, task.final
-    room = FINAL_ROOM * packet_fwhm_m(facts, source)
+    room = final_room_m(facts, source)
     way = final_way(facts, source, high_m - low_m + 2.0 * room)
     half_width = INTERVAL_SDS * way.sd_m
     final = make_leg(

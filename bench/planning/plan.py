@@ -12,7 +12,7 @@ import math
 import numpy as np
 
 from bench.planning.belief import Belief
-from bench.planning.legs import FINAL_ROOM, Task, after_detection
+from bench.planning.legs import Task, after_detection
 from bench.planning.model import BenchFacts, Leg, Plan, SourceFacts
 from bench.planning.routes import (
     Route,
@@ -22,7 +22,7 @@ from bench.planning.routes import (
     lower_bound_time,
     searched_route,
 )
-from bench.planning.sampling import WORST_DETECTION, final_way, packet_fwhm_m, search_way
+from bench.planning.sampling import WORST_DETECTION, final_room_m, final_way, search_way
 from bench.planning.search import Cells
 
 __all__ = ["CAREFUL_OUTSIDE", "GIVE_UP_REACHABLE", "plan_search"]
@@ -109,7 +109,7 @@ def _reachable(facts: BenchFacts, belief: Belief) -> tuple[Cells, float]:
 
 
 def _final_seen(facts: BenchFacts, source: SourceFacts) -> bool:
-    window = 2.0 * FINAL_ROOM * packet_fwhm_m(facts, source)
+    window = 2.0 * final_room_m(facts, source)
     return final_way(facts, source, window).detection_probability >= WORST_DETECTION
 
 

@@ -16,7 +16,6 @@ from bench.planning.kinematics import (
     stroke_time,
 )
 from bench.planning.legs import (
-    FINAL_ROOM,
     INTERVAL_SDS,
     Task,
     final_legs,
@@ -26,7 +25,7 @@ from bench.planning.legs import (
     timed_legs,
 )
 from bench.planning.model import Leg, SourceFacts
-from bench.planning.sampling import final_way, packet_fwhm_m, search_way
+from bench.planning.sampling import final_room_m, final_way, search_way
 from bench.planning.search import Segment
 from bench.planning.wording import why_search
 
@@ -51,7 +50,7 @@ def direct_route(task: Task) -> Route | None:
     """The final scan at once, where the belief is narrow enough for it."""
     facts = task.facts
     low, high = task.belief.interval(WINDOW_LEVEL)
-    room = FINAL_ROOM * packet_fwhm_m(facts, task.final)
+    room = final_room_m(facts, task.final)
     legs = tuple(final_legs(task, low, high))
     if high - low + 2.0 * room > longest_scan(facts, legs[0].speed_m_s or facts.speed_m_s):
         return None
@@ -149,6 +148,6 @@ def lower_bound_time(task: Task) -> float:
         / np.sum(task.cells.mass)
     )
     travel = stroke_time(distance, facts.speed_m_s, facts.acceleration_m_s2)
-    width = 2.0 * FINAL_ROOM * packet_fwhm_m(facts, source)
+    width = 2.0 * final_room_m(facts, source)
     way = final_way(facts, source, width)
     return travel + change_time(source, task.current) + width * way.time_per_metre(facts)

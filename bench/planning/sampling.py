@@ -15,12 +15,23 @@ from bench.planning.model import BenchFacts, Mode, SourceFacts
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 
-__all__ = ["Way", "detection", "final_way", "locating_sd_m", "packet_fwhm_m", "search_way"]
+__all__ = [
+    "FINAL_ROOM",
+    "Way",
+    "detection",
+    "final_room_m",
+    "final_way",
+    "locating_sd_m",
+    "packet_fwhm_m",
+    "search_way",
+]
 
 FWHM_PER_SD = 2.0 * math.sqrt(2.0 * math.log(2.0))
 
 # Common practice, no source, all of these:
 READINGS_PER_PACKET = 10.0  # within the packet's full width at half maximum, when searching
+FINAL_ROOM = 3.0  # packet widths to each side: the whole packet, its lobes and some plain noise
+FOOT = 2.4  # of one over the half-power band: what the fit of a packet asks for
 READINGS_PER_FRINGE = 3.0  # where the fringes are not undersampled on purpose
 SPEED_TOLERANCE = 0.03  # how well a stage keeps its speed
 FOLD_ROOM = 0.05  # fringes a reading between an aliased band and where it would fold
@@ -65,6 +76,17 @@ class Way:
 def packet_fwhm_m(facts: BenchFacts, source: SourceFacts) -> float:
     """Full width at half maximum of the source's packet in stage reading."""
     return source.coherence_fwhm_m / abs(facts.opd_per_m)
+
+
+def final_room_m(facts: BenchFacts, source: SourceFacts) -> float:
+    """Stage reading to either side of the packet that the final scan covers, side lobes included.
+
+    A lamp between hard edges has a packet that is narrow at half its height and wide at its foot:
+    its strongest wavelengths keep in step for about one over the half-power band.
+    """
+    low, high = source.band
+    foot = FOOT / (high - low) / abs(facts.opd_per_m) if high > low else 0.0
+    return max(FINAL_ROOM * packet_fwhm_m(facts, source), foot)
 
 
 def _blur(facts: BenchFacts, source: SourceFacts, speed_m_s: FloatArray) -> FloatArray:
