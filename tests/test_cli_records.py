@@ -14,8 +14,8 @@ import pytest
 from typer.testing import CliRunner, Result
 
 from bench.cli.records import app
-from bench.cli.records_text import WIDTH, _columns
-from bench.journal import finite, open_journal, verify
+from bench.cli.records_text import WIDTH, _columns, one_run
+from bench.journal import finite, open_journal, runs, verify
 
 FIRST, SECOND = "20261201-093000-aaaa", "20261201-100000-bbbb"
 HOSTILE = "\x1b[31mNord\x07 <b>\u202e=1+1 北北"
@@ -117,7 +117,7 @@ def test_list_names_the_newest_first(journal: Path) -> None:
     assert result.exit_code == 0
     fits(result)
     assert result.stdout.index(SECOND) < result.stdout.index(FIRST)
-    assert f"{FIRST}  2026-12-01 09:30:02  accepted  zero 13 218.401(12) um" in result.stdout
+    assert f"{FIRST}  2026-12-01 09:30:02  accepted  zero 13.218 401(12) mm" in result.stdout
     assert f"{SECOND}  2026-12-01 09:30:10  open" in result.stdout
     assert verify(journal).head[:16] in result.stdout
     assert result.stderr == ""
@@ -142,11 +142,11 @@ def test_list_keeps_to_its_limit(journal: Path) -> None:
 def test_show_a_run(journal: Path, wanted: str) -> None:
     result = call("show", wanted, "--journal", journal)
     assert result.exit_code == 0
-    fits(result)
+    assert all(line.isprintable() for line in result.stdout.splitlines())
     for said in (
         "accepted",
         "12.3(4.5) nm",
-        "m-1  zero  13 218.401(12) um",
+        "m-1  zero  13.218 401(12) mm",
         "scan scan-1: 20 rows in 4 blocks",
         "(simulated)",
     ):
@@ -162,7 +162,7 @@ def test_show_a_measurement(journal: Path) -> None:
     result = call("show", "m-1", "--journal", journal)
     assert result.exit_code == 0
     fits(result)
-    assert "13 218.401(12) um" in result.stdout
+    assert "13.218 401(12) mm" in result.stdout
     assert "degrees_of_freedom: not known" in result.stdout
     document = json.loads(call("show", "m-1", "--json", "--journal", journal).stdout)
     assert (document["record"], document["measurement"]["seq"]) == ("measurement", 7)
@@ -288,3 +288,64 @@ def test_an_empty_journal_is_no_error(tmp_path: Path) -> None:
         "head": "0" * 64,
         "problems": [],
     }
+
+
+@pytest.fixture
+def answered(tmp_path: Path) -> Path:
+    path = tmp_path / "answered.sqlite3"
+    with open_journal(path, write=True) as book:
+        for run, by in ((FIRST, "Kim"), (SECOND, "nobody: unattended, started by root")):
+            book.append("run-started", {"procedure": "p", "operator": "root"}, run=run)
+            book.append("question-answered", {"accepted": True, "by": by}, run=run)
+            book.append(
+                "move-intended",
+                {"target_m": 0.012851602, "speed_m_s": 1e-3, "wait_s": 0.05, "why": "x" * 100},
+                run=run,
+            )
+        book.append(
+            "measurement",
+            {"id": "m-9", "name": "contrast", "value": 0.588, "unit": "1"},
+            run=FIRST,
+        )
+    return path
+
+
+def test_who_acknowledged_is_named(answered: Path) -> None:
+    text = call("list", "--journal", answered).stdout
+    assert text.count("by Kim") == 1
+    assert text.count("by root") == 1
+    listed = json.loads(call("list", "--json", "--journal", answered).stdout)["runs"]
+    assert [run["acknowledged_by"] for run in listed] == ["", "Kim"]
+    assert "acknowledged by Kim" in call("show", FIRST, "--journal", answered).stdout
+
+
+def test_entries_are_in_mm_and_whole_where_no_terminal_cuts_them(answered: Path) -> None:
+    text = call("show", FIRST, "--journal", answered).stdout
+    line = next(line for line in text.splitlines() if "move-intended" in line)
+    assert "target 12.851602 mm, " in line
+    assert "speed 1 mm/s, " in line
+    assert "wait 0.05 s" in line
+    assert "x" * 100 in line
+    with open_journal(answered, write=False) as book:
+        (run, _), head, entries = runs(book), book.head, list(book.entries(run=FIRST))
+    for line in one_run(run, (), entries, head):
+        assert _columns(line) <= WIDTH
+
+
+def test_a_number_without_a_unit_has_none(answered: Path) -> None:
+    assert "m-9  contrast  0.588\n" in call("show", FIRST, "--journal", answered).stdout
+
+
+def test_a_head_that_is_too_short_is_a_mistake_of_the_command(answered: Path) -> None:
+    result = call("verify", "--head", "fbd2", "--journal", answered)
+    assert result.exit_code == 2
+    assert "at least 16 hex digits" in result.stderr
+    assert "intact" not in result.stdout
+
+
+def test_verify_of_a_cut_file_does_not_send_to_verify(answered: Path) -> None:
+    answered.write_bytes(answered.read_bytes()[:9000])
+    result = call("verify", "--journal", answered)
+    assert result.exit_code == 1
+    assert "records verify" not in result.stderr
+    assert "go back to a copy" in result.output

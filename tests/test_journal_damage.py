@@ -16,7 +16,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from bench.errors import JournalDamaged, JournalError
+from bench.errors import JournalDamaged, JournalError, UsageError
 from bench.journal import finite, measurements, open_journal, runs, verify
 from bench.journal.canonical import block_name, encode_block
 
@@ -352,7 +352,10 @@ def test_a_noted_head_tells_of_a_cut_or_rewritten_end(
     assert result.problems == (
         f"the noted head {noted[:16]} is not in this journal: entries were cut or rewritten",
     )
-    assert not verify(path, noted_heads=("abc",)).intact
+    for short in ("abc", "fbd2", "g" * 16, "0" * 65):
+        with pytest.raises(UsageError, match="cannot be a head") as caught:
+            verify(path, noted_heads=(short,))
+        assert "at least 16 hex digits" in caught.value.why
 
 
 # --- writing to what is damaged ------------------------------------------------------------------

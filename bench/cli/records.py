@@ -114,7 +114,7 @@ def show_record(
     elif isinstance(record, MeasurementRecord):
         _say(records_text.one_measurement(record, entries, head))
     else:
-        _say(records_text.one_run(record, measured, entries, head))
+        _say(records_text.one_run(record, measured, entries, head, _width()))
 
 
 @app.command("verify", help="Check the whole chain: every entry, every reading.")
@@ -185,6 +185,15 @@ def _record_json(
         "measurements": [dataclasses.asdict(item) for item in measured],
         "entries": [dataclasses.asdict(entry) for entry in entries],
     }
+
+
+def _width() -> int | None:
+    """Columns that a line may take; None where no terminal cuts it."""
+    import sys
+
+    from bench.cli.records_text import WIDTH
+
+    return WIDTH if sys.stdout.isatty() else None
 
 
 def _say(lines: list[str]) -> None:

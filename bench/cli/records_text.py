@@ -15,6 +15,8 @@ if TYPE_CHECKING:
 
 WIDTH = 80
 _DEEPEST = 12
+_TO_MM = {"nm": 1e-6, "um": 1e-3, "mm": 1.0, "m": 1e3}
+_PLACES = ("zero", "stage_left_at")  # measured on the stage, so they are in mm
 _MOST_PROBLEMS = 20
 
 
@@ -22,11 +24,12 @@ def run_list(runs: Sequence[RunSummary], limit: int, head: Head, path: str) -> l
     """Two lines a run, in the order given."""
     lines: list[str] = []
     for run in runs[:limit]:
-        zero = f"zero {quantity(run.zero)}" if run.zero else _clean(run.reason)
+        zero = f"zero {reading(run.zero)}" if run.zero else _clean(run.reason)
         lines.append(
             _cut(f"{_clean(run.run)}  {_moment(run.started_utc)}  {_clean(run.outcome)}  {zero}")
         )
-        by = f", by {_clean(run.operator)}" if run.operator else ""
+        who = run.acknowledged_by or run.operator
+        by = f", by {_clean(who)}" if who else ""
         simulated = " (simulated)" if run.simulated else ""
         on = f" on {_clean(run.bench_name)}" if run.bench_name else ""
         lines.append(_cut(f"    {_clean(run.procedure)}{on}{simulated}{by}"))
@@ -42,18 +45,23 @@ def one_run(
     measured: Sequence[MeasurementRecord],
     entries: Sequence[Entry],
     head: Head,
+    width: int | None = WIDTH,
 ) -> list[str]:
-    """A run: what came of it, what was measured, and its entries in one line each."""
+    """A run: what came of it, what was measured, and its entries in one line each.
+
+    The lines of entries are cut at ``width`` columns, or left whole where it is None.
+    """
     rows = [
         ("run", run.run),
         ("procedure", run.procedure),
         ("bench", run.bench_name + (" (simulated)" if run.simulated else "")),
         ("operator", run.operator),
+        ("acknowledged", run.acknowledged_by and f"by {run.acknowledged_by}"),
         ("started", f"{_moment(run.started_utc)} UTC"),
         ("ended", f"{_moment(run.ended_utc)} UTC" if run.ended_utc else "not in the journal"),
         ("outcome", run.outcome),
         ("reason", run.reason),
-        ("zero", quantity(run.zero) if run.zero else ""),
+        ("zero", reading(run.zero) if run.zero else ""),
         ("residual OPD", quantity(run.residual_opd) if run.residual_opd else ""),
         ("entries", f"{run.entries}, from {run.first_seq}"),
         ("head", _head(head)),
@@ -65,7 +73,7 @@ def one_run(
             _cut(f"  {_clean(item.id)}  {_clean(item.name)}  {_measured(item)}")
             for item in measured
         ]
-    return [*lines, "", "Entries", *_entry_lines(entries)]
+    return [*lines, "", "Entries", *_entry_lines(entries, width)]
 
 
 def one_measurement(item: MeasurementRecord, entries: Sequence[Entry], head: Head) -> list[str]:
@@ -138,6 +146,16 @@ def quantity(value: Mapping[str, Any]) -> str:
     return _shown(number, u if _is_number(u) else None, unit if isinstance(unit, str) else "")
 
 
+def reading(value: Mapping[str, Any]) -> str:
+    """A place on the stage, in mm as the screens show it."""
+    factor = _TO_MM.get(str(value.get("unit")))
+    number, u = value.get("value"), value.get("standard_uncertainty")
+    if factor is None or not _is_number(number):
+        return quantity(value)
+    in_mm: dict[str, Any] = {"value": number * factor, "unit": "mm"}
+    return quantity(in_mm | ({"standard_uncertainty": u * factor} if _is_number(u) else {}))
+
+
 # --- inside --------------------------------------------------------------------------------------
 
 
@@ -145,7 +163,8 @@ def _shown(value: Any, u: Any, unit: str) -> str:
     from bench.quantities import show
 
     try:
-        return show(float(value), None if u is None else float(u), _clean(unit))
+        bare = "" if unit == "1" else _clean(unit)
+        return show(float(value), None if u is None else float(u), bare)
     except (ArithmeticError, ValueError):
         return f"{value} {_clean(unit)}".strip()
 
@@ -153,7 +172,11 @@ def _shown(value: Any, u: Any, unit: str) -> str:
 def _measured(item: MeasurementRecord) -> str:
     if item.value is None:
         return "no value"
-    text = _shown(item.value, item.standard_uncertainty, item.unit)
+    if item.name in _PLACES:
+        u = item.standard_uncertainty
+        text = reading({"value": item.value, "unit": item.unit, "standard_uncertainty": u})
+    else:
+        text = _shown(item.value, item.standard_uncertainty, item.unit)
     degrees = item.degrees_of_freedom
     return text if degrees is None else f"{text}, {degrees:.3g} degrees of freedom"
 
@@ -181,11 +204,11 @@ def _columns(text: str) -> int:
     )
 
 
-def _cut(line: str) -> str:
+def _cut(line: str, width: int = WIDTH) -> str:
     line = line.rstrip()
-    if _columns(line) <= WIDTH:
+    if _columns(line) <= width:
         return line
-    while _columns(line) > WIDTH - 3:
+    while _columns(line) > width - 3:
         line = line[:-1]
     return line.rstrip() + "..."
 
@@ -238,7 +261,7 @@ def _scalar(value: Any) -> str:
     return printable(value, 2000) if isinstance(value, str) else _clean(value)
 
 
-def _entry_lines(entries: Sequence[Entry]) -> list[str]:
+def _entry_lines(entries: Sequence[Entry], width: int | None) -> list[str]:
     """A line an entry; readings of one scan that follow each other share one."""
     lines: list[str] = []
     index = 0
@@ -253,23 +276,42 @@ def _entry_lines(entries: Sequence[Entry]) -> list[str]:
         if entry.kind == "readings":
             kept = entries[index : last + 1]
             rows = sum(item.body["rows"] for item in kept if _is_number(item.body.get("rows")))
-            said = f"scan {_clean(entry.body.get('scan'))}: {rows} rows in {len(kept)} blocks"
+            said = f"scan {_clean(entry.body.get('scan'))}: {rows} rows in {len(kept)} block"
+            said += "s" * (len(kept) != 1)
         else:
-            said = _digest(entry.body)
+            said = _digest(entry.body, 60 if width is not None else 300)
         bench_s = "" if entry.bench_time_s is None else f"{entry.bench_time_s:.3f} s"
         moment = f"{entry.seq:>5} {_clean(entry.time_utc[11:19])} {bench_s:>10}"
-        lines.append(_cut(f"{moment} {_clean(entry.kind):<15} {said}"))
+        line = f"{moment} {_clean(entry.kind):<17} {said}".rstrip()
+        lines.append(line if width is None else _cut(line, width))
         index = last + 1
     return lines
 
 
-def _digest(body: Mapping[str, Any]) -> str:
+def _digest(body: Mapping[str, Any], longest: int) -> str:
     parts = []
     for key, value in body.items():
         if isinstance(value, Mapping):
             if "value" in value:
-                parts.append(f"{_clean(key)} {quantity(value)}")
+                said = reading(value) if key in _PLACES else quantity(value)
+                parts.append(f"{_clean(key)} {said}")
+        elif isinstance(value, float):
+            parts.append(_number_with_unit(_clean(key), value))
         elif not isinstance(value, list) and value is not None:
-            shown = f"{value:.9g}" if isinstance(value, float) else printable(_scalar(value), 60)
-            parts.append(f"{_clean(key)} {shown}")
+            parts.append(f"{_clean(key)} {printable(_scalar(value), longest)}")
     return ", ".join(parts)
+
+
+def _number_with_unit(key: str, value: float) -> str:
+    """A bare number of the journal, whose key ends in its SI unit: ``position 7.291 620 mm``."""
+    from bench.quantities import show_length
+
+    if key.endswith("_m_s"):
+        return f"{key.removesuffix('_m_s')} {_shown(value * 1e3, None, 'mm/s')}"
+    if key.endswith("_m"):
+        small = abs(value) < 1e-4 or not math.isfinite(value)
+        said = show_length(value) if small else f"{value * 1e3:.6f} mm"
+        return f"{key.removesuffix('_m')} {said}"
+    if key.endswith("_s"):
+        return f"{key.removesuffix('_s')} {_shown(value, None, 's')}"
+    return f"{key} {value:.9g}"

@@ -12,7 +12,7 @@ from typing import Any
 from sqlalchemy import func, select
 from sqlalchemy.engine import Connection
 
-from bench.errors import JournalDamaged, printable
+from bench.errors import JournalDamaged, UsageError, printable
 from bench.journal.canonical import KIND, block_name, canonical_json, decode_block, number_text
 from bench.journal.model import GENESIS, Entry, Verification
 from bench.journal.place import refuse_unless_file
@@ -60,13 +60,20 @@ def verify_journal(
     path: Path, progress: Callable[[int, int], None] | None, noted_heads: tuple[str, ...]
 ) -> Verification:
     """See ``bench.journal.verify``."""
+    missing = {noted.strip().lower() for noted in noted_heads}
+    for noted in sorted(missing):
+        if not _NOTED.match(noted):
+            raise UsageError(
+                f"{noted[:80]!r} cannot be a head",
+                where="--head",
+                why="a noted head is at least 16 hex digits, at most 64",
+                mend="copy it whole from where it was noted; `evenarm records list` shows today's",
+            )
     refuse_unless_file(path, must_exist=True)
     found = _Findings()
     entries, head = 0, GENESIS
-    missing = {noted.strip().lower() for noted in noted_heads}
-    store = Store(path, write=False)
+    store = _opened(path)
     try:
-        refuse_unless_journal(store)
         try:
             with store.reading() as connection:
                 _check_file(connection, found)
@@ -79,11 +86,29 @@ def verify_journal(
     for noted in sorted(missing):
         found.add(
             f"the noted head {noted[:16]} is not in this journal: entries were cut or rewritten"
-            if _NOTED.match(noted)
-            else f"the noted head {noted[:80]!r} is not 16 to 64 hexadecimal digits"
         )
     problems = found.all()
     return Verification(entries, not problems, head, problems)
+
+
+def _opened(path: Path) -> Store:
+    """The file as a journal; where it is too damaged to be read at all, verify is what ran."""
+    try:
+        store = Store(path, write=False)
+        try:
+            refuse_unless_journal(store)
+        except BaseException:
+            store.close()
+            raise
+    except JournalDamaged as error:
+        raise JournalDamaged(
+            error.what,
+            where=error.where,
+            why=error.why,
+            mend="keep the file as it is, for it may hold more than can be read here, and go back "
+            "to a copy",
+        ) from None
+    return store
 
 
 def _check_file(connection: Connection, found: _Findings) -> None:
@@ -139,7 +164,7 @@ def _check_chain(
         if row[6] != prev:
             found.add(f"entry {seq}: it does not name the entry before it")
         prev = sha256 if isinstance(sha256, str) else ""
-        missing -= {noted for noted in missing if _NOTED.match(noted) and prev.startswith(noted)}
+        missing -= {noted for noted in missing if prev.startswith(noted)}
         expected, done = seq + 1, done + 1
         if progress is not None and (done % 500 == 0 or done == total):
             progress(done, total)

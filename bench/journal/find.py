@@ -30,8 +30,14 @@ def all_runs(journal: Journal) -> list[RunSummary]:
     started = {entry.run: entry for entry in journal.entries(kinds=("run-started",)) if entry.run}
     ended = {entry.run: entry for entry in journal.entries(kinds=("run-ended",)) if entry.run}
     counts = journal.entries_by_run()
+    answered: dict[str, str] = {}
+    for entry in journal.entries(kinds=("question-answered",)):
+        by = _text(entry.body, "by")
+        if entry.run and by and entry.body.get("accepted") is True and not by.startswith("nobody"):
+            answered.setdefault(entry.run, by)
     return [
-        _summary(run, entry, ended.get(run), counts.get(run, 0)) for run, entry in started.items()
+        _summary(run, entry, ended.get(run), counts.get(run, 0), answered.get(run, ""))
+        for run, entry in started.items()
     ]
 
 
@@ -91,7 +97,9 @@ def _quantity(body: Mapping[str, Any], key: str) -> Mapping[str, Any] | None:
     return None
 
 
-def _summary(run: str, start: Entry, end: Entry | None, entries: int) -> RunSummary:
+def _summary(
+    run: str, start: Entry, end: Entry | None, entries: int, answered_by: str
+) -> RunSummary:
     result: Mapping[str, Any] = {} if end is None else end.body
     return RunSummary(
         run=run,
@@ -107,6 +115,7 @@ def _summary(run: str, start: Entry, end: Entry | None, entries: int) -> RunSumm
         ended_utc=None if end is None else end.time_utc,
         zero=_quantity(result, "zero"),
         residual_opd=_quantity(result, "residual_opd"),
+        acknowledged_by=answered_by or _text(start.body, "acknowledged_by"),
     )
 
 

@@ -54,7 +54,8 @@ class RunSummary:
     """A run in one line. ``outcome`` is ``open`` where the journal holds no end of it.
 
     ``zero`` and ``residual_opd`` are quantities as mappings of value, unit and, where known,
-    standard_uncertainty; None where the run did not get that far.
+    standard_uncertainty; None where the run did not get that far. ``acknowledged_by`` is who
+    answered for the cautions, empty where nobody did.
     """
 
     run: str
@@ -70,6 +71,7 @@ class RunSummary:
     ended_utc: str | None = None
     zero: Mapping[str, Any] | None = None
     residual_opd: Mapping[str, Any] | None = None
+    acknowledged_by: str = ""
 
 
 @dataclass(frozen=True)
