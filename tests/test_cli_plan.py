@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+import re
 from dataclasses import replace
 from pathlib import Path
 
@@ -11,6 +12,7 @@ import pytest
 from typer.testing import CliRunner
 
 from bench.cli import app
+from bench.cli.benchfile import open_bench
 from bench.cli.plan import duration_text
 from bench.errors import UsageError
 from bench.procedure.facts import belief_from, bench_facts, excluded_sources
@@ -97,6 +99,22 @@ def test_the_text_fits_eighty_columns():
     for word in ("expected", "at worst", "missed", "compared", "lower bound", "verify, white"):
         assert word in result.stdout
     assert "simulated bench that comes with Evenarm" in result.stderr
+
+
+@pytest.mark.parametrize("columns", ["60", "20", "66"])
+def test_the_text_is_wrapped_at_the_width_of_a_narrow_terminal(monkeypatch, columns):
+    monkeypatch.setenv("COLUMNS", columns)
+    text = CliRunner().invoke(app, ["plan"]).stdout
+    assert max(map(len, text.splitlines())) <= max(60, int(columns))
+    assert re.search(r"missed +chance of missing it: 1 in \d+\n", text)
+    assert "no plan can" in " ".join(text.split())
+
+
+@pytest.mark.parametrize("seed", [-1, 2**63])
+def test_a_seed_that_cannot_be_is_blamed_on_its_option(seed):
+    with pytest.raises(UsageError, match="cannot be a seed") as caught:
+        open_bench(None, seed)
+    assert caught.value.where == "--seed"
 
 
 def test_the_source_in_use_saves_its_change(spec):

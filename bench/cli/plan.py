@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 __all__ = ["command", "duration_text", "narrowing_lines", "plan_document", "plan_lines"]
 
 _WIDTH = 80
+_NARROWEST = 60
 _MOST_SHOWN = 8
 
 
@@ -54,7 +55,10 @@ def command(
     if as_json:
         emit_json(plan_document(plan))
     else:
-        for line in plan_lines(spec, facts, belief, plan, excluded):
+        import shutil
+
+        width = max(_NARROWEST, min(_WIDTH, shutil.get_terminal_size((_WIDTH, 24)).columns))
+        for line in plan_lines(spec, facts, belief, plan, excluded, width):
             typer.echo(line)
     raise typer.Exit(EXIT_DONE if plan.legs else EXIT_NEGATIVE)
 
@@ -111,53 +115,75 @@ def plan_lines(
     belief: Belief,
     plan: Plan,
     excluded: tuple[Excluded, ...] = (),
+    width: int = _WIDTH,
 ) -> list[str]:
-    """The plan as text of at most 80 columns; names from files are made printable."""
+    """The plan as text of at most ``width`` columns, of which there must be 60 or more.
+
+    Names from files are made printable.
+    """
     from bench.planning.wording import length_text
 
     low, high = (end * 1e3 for end in belief.interval(0.95))
     lines = [f"Plan for {printable(spec.name, 60)}"]
-    lines += [f"The zero is expected from {low:.3f} to {high:.3f} mm (95 %), of stage reading.", ""]
+    said = f"The zero is expected from {low:.3f} to {high:.3f} mm (95 %), of stage reading."
+    lines += [*_wrapped(said, width), ""]
     if not plan.legs:
         reason = "No plan: "
         if belief.probability(*facts.travel_m) < 0.5:
             reason += "the zero is expected outside the travel limits of the stage."
         else:
             reason += "none of the sources would show its fringes above the noise."
-        return lines + _wrapped(reason) + _excluded_lines(excluded)
-    lines += _table(plan, length_text)
-    lines += [
+        return lines + _wrapped(reason, width) + _excluded_lines(excluded, width)
+    lines += _table(plan, length_text, width)
+    told = [
         "",
         f"expected     {duration_text(plan.expected_time_s)}",
         f"at worst     {duration_text(plan.worst_time_s)}  (every leg, nothing twice)",
-        f"missed       {plan.miss_probability:.2g} of all runs, one in"
-        f" {1.0 / plan.miss_probability:.0f}",
+        f"missed       chance of missing it: {_one_in(plan.miss_probability)}",
     ]
     shortest = printable(plan.legs[-1].source, 24)
     if plan.white_only_time_s is not None:
         same = abs(plan.white_only_time_s - plan.expected_time_s) < 0.005 * plan.expected_time_s
-        lines.append(
+        told.append(
             f"compared     {duration_text(plan.white_only_time_s)} with {shortest} alone"
             + (", which is this plan" if same else "")
         )
-    lines.append(
+    told.append(
         f"lower bound  {duration_text(plan.lower_bound_time_s)}: straight to the zero and one final"
         " scan; no plan can"
     )
-    lines += ["", *narrowing_lines(belief.half_width_m, plan, length_text)]
-    return lines + _excluded_lines(excluded)
+    lines += [line for text in told for line in _wrapped(text, width, 13) or [""]]
+    lines += ["", *narrowing_lines(belief.half_width_m, plan, length_text, width)]
+    return lines + _excluded_lines(excluded, width)
 
 
-def _excluded_lines(excluded: tuple[Excluded, ...]) -> list[str]:
+def _one_in(probability: float) -> str:
+    if not probability > 0.0:
+        return "none"
+    if probability >= 0.1:
+        return f"{100.0 * probability:.0f} %"
+    return f"1 in {float(f'{1.0 / probability:.3g}'):.0f}"
+
+
+def _excluded_lines(excluded: tuple[Excluded, ...], width: int) -> list[str]:
     lines: list[str] = []
     for entry in excluded:
-        lines += ["", *_wrapped(f"Not used: {printable(entry.name, 40)}: {entry.reason}.")]
+        lines += ["", *_wrapped(f"Not used: {printable(entry.name, 40)}: {entry.reason}.", width)]
     return lines
 
 
-def _table(plan: Plan, length_text: Any) -> list[str]:
-    head = f"   {'source':<14}{'mode':<6}{'from':>10}{'to':>10} {'pace':>10}{'readings':>9}"
-    lines = [f"{head}{'time':>9}{'then ±':>8}", f"{'':3}{'':20}{'mm':>10}{'mm':>10}"]
+def _table(plan: Plan, length_text: Any, width: int) -> list[str]:
+    narrow = width < _WIDTH  # no room for the mode, the readings and what comes of it
+
+    def row(number: str, *cells: str) -> str:
+        source, mode, place, pace, readings, time, then = cells
+        shown = f"{number:>2} {source:<14}" + ("" if narrow else f"{mode:<6}")
+        shown += f"{place} {pace:>10}" + ("" if narrow else f"{readings:>9}")
+        return f"{shown}{time:>9}" + ("" if narrow else f"{then:>8}")
+
+    places = f"{'from':>10}{'to':>10}"
+    lines = [row("", "source", "mode", places, "pace", "readings", "time", "then ±")]
+    lines.append(row("", "", "", f"{'mm':>10}{'mm':>10}", "", "", "", "").rstrip())
     searches = [
         leg for leg in plan.legs if leg.purpose == "search" and leg.source == plan.legs[0].source
     ]
@@ -182,12 +208,19 @@ def _table(plan: Plan, length_text: Any) -> list[str]:
             half = length_text(abs(leg.stop_m - leg.start_m) / 2.0)
             place = f"{'found ± ' + half:>20}"
         lines.append(
-            f"{number:>2} {printable(leg.source, 13):<14}{leg.mode:<6}{place} {pace:>10}"
-            f"{leg.readings:>9}"
-            f"{duration_text(leg.expected_time_s):>9}{length_text(leg.half_width_after_m):>8}"
+            row(
+                str(number),
+                printable(leg.source, 13),
+                leg.mode,
+                place,
+                pace,
+                str(leg.readings),
+                duration_text(leg.expected_time_s),
+                length_text(leg.half_width_after_m),
+            )
         )
         if leg.why != last_why:
-            lines += [f"     {text}" for text in _wrapped(printable(leg.why), _WIDTH - 5)]
+            lines += [f"     {text}" for text in _wrapped(printable(leg.why), width - 5)]
             last_why = leg.why
     return lines
 
@@ -205,13 +238,18 @@ def duration_text(time_s: float) -> str:
     return f"{minutes // 60} h {minutes % 60:02d} min"
 
 
-def _wrapped(text: str, width: int = _WIDTH) -> list[str]:
+def _wrapped(text: str, width: int, indent: int = 0) -> list[str]:
     import textwrap
 
-    return textwrap.wrap(text, width)
+    if len(text) <= width:  # blanks stay, as they line up columns
+        return [text]
+    first, rest = text[:indent], text[indent:]
+    return textwrap.wrap(rest, width, initial_indent=first, subsequent_indent=" " * indent)
 
 
-def narrowing_lines(prior_half_width_m: float, plan: Plan, length_text: Any) -> list[str]:
+def narrowing_lines(
+    prior_half_width_m: float, plan: Plan, length_text: Any, width: int = _WIDTH
+) -> list[str]:
     """A picture of the narrowing: how far the zero may be, before and after, a bar a stage.
 
     One column of the bar is a quarter of a decade; the shortest bar is one column.
@@ -225,9 +263,9 @@ def narrowing_lines(prior_half_width_m: float, plan: Plan, length_text: Any) -> 
             rows.append((label, leg.half_width_after_m / math.sqrt(2.0)))
         elif rows[-1] != (label, leg.half_width_after_m):
             rows.append((label, leg.half_width_after_m))
-    floor = min(width for _, width in rows)
+    floor = min(half_m for _, half_m in rows)
     lines = ["How far the zero may be (± 95 %), if each scan finds it:"]
-    for label, width in rows:
-        bar = "#" * (1 + round(4.0 * math.log10(width / floor)))
-        lines.append(f"  {label:<23} {length_text(width):>8}  {bar[:44]}")
+    for label, half_m in rows:
+        bar = "#" * (1 + round(4.0 * math.log10(half_m / floor)))
+        lines.append(f"  {label:<23} {length_text(half_m):>8}  {bar[: width - 36]}")
     return lines
