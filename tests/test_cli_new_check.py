@@ -5,6 +5,7 @@ from __future__ import annotations
 import dataclasses
 import json
 import os
+import re
 import subprocess
 import sys
 from pathlib import Path
@@ -141,9 +142,15 @@ def test_check_shows_how_the_bench_is_understood() -> None:
     for text in (
         "Practice bench", "path factor +2", "2.000 54 mm of OPD", "0 mm to 25 mm", "1 mm/s",
         "filter 2 nm", "159 um", "12.5 mm, within 5 mm", "N-BK7", "path-equalisation",
-        "every check passed",
+        "every check passed", "1 kHz\n", "20 mV\n", "5 mV\n", "0.6 V ",
     ):  # fmt: skip
         assert text in result.stdout, text
+    assert "memory" not in result.stdout  # the driver's own default says nothing about this bench
+
+
+def test_check_shows_a_setting_that_was_given(folder: Path) -> None:
+    change(folder, 'noise = "5 mV"', 'noise = "5 mV"\nsettings = { memory = 500 }')
+    assert re.search(r"memory +500\n", evenarm("check").stdout)
 
 
 @pytest.mark.usefixtures("folder")
@@ -195,7 +202,7 @@ def test_check_without_limits_fails_and_is_no_input_error(folder: Path) -> None:
         ('noise = "5 mV"', "", "no noise"),
         ('dark = "0.02 V"', "", "no dark"),
         ('range = ["0 V", "5 V"]', "", "no range"),
-        ('signal = "1 V"', 'signal = "3 V"', "do not fit"),
+        ('signal = "1 V"', 'signal = "3 V"', "would go beyond"),
         ('reversal_allowance = "20 um"', 'reversal_allowance = "0 um"', "straight into the zero"),
         ("[expect]", "[records]\n[later]", ""),
     ],
@@ -212,6 +219,7 @@ def test_check_warns(folder: Path, old: str, new: str, said: str) -> None:
     assert result.exit_code == 0
     (line,) = [line for line in result.stdout.splitlines() if line.startswith("warning")]
     assert said in line
+    assert result.stdout.splitlines()[-1] == "passed with 1 warning"
 
 
 def test_check_refuses_with_every_problem(folder: Path) -> None:
@@ -250,7 +258,8 @@ def test_the_shipped_bench_is_announced(tmp_path: Path, monkeypatch: pytest.Monk
     assert result.exit_code == 0
     assert result.stderr.count("\n") == 1
     assert "no bench.toml here" in result.stderr
-    assert f"sqlite:///{tmp_path / 'logs' / 'journal.sqlite3'}" in result.stdout
+    assert f"records  {tmp_path / 'logs' / 'journal.sqlite3'}" in result.stdout
+    assert "sqlite:" not in result.stdout
     assert list(tmp_path.iterdir()) == []
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -45,12 +46,16 @@ def command(
             typer.echo(f"warning  {printable(text, 600)}")
         for text in failed:
             typer.echo(f"FAILED   {printable(text, 600)}")
-        typer.echo(
-            f"{len(failed)} check{'s' * (len(failed) != 1)} failed"
-            if failed
-            else "every check passed"
-        )
+        typer.echo(_verdict(len(failed), len(warned)))
     raise typer.Exit(EXIT_NEGATIVE if failed else EXIT_DONE)
+
+
+def _verdict(failed: int, warned: int) -> str:
+    if failed:
+        return f"{failed} check{'s' * (failed != 1)} failed"
+    if warned:
+        return f"passed with {warned} warning{'s' * (warned != 1)}"
+    return "every check passed"
 
 
 def failures(spec: BenchSpec) -> list[str]:
@@ -76,8 +81,8 @@ def warnings(spec: BenchSpec) -> list[str]:
         top = None if spec.detector.range is None else spec.detector.range[1]
         if top is not None and (spec.detector.dark or 0.0) + 2 * source.signal > top:
             found.append(
-                f"source {source.name!r}: fringes of twice its signal do not fit into the "
-                "detector's range"
+                f"source {source.name!r}: fringes twice as large as its signal would go beyond "
+                "the detector's range"
             )
     if spec.safety_contact is None:
         found.append("[bench] has no safety_contact: nobody is named with the cautions")
@@ -130,13 +135,31 @@ def _settings(kind: str, name: str, values: dict[str, Any], unit: str) -> list[d
     from drivers import registry
 
     declared = registry.declared(kind, name)
-    rows = []
+    rows: list[dict[str, Any]] = []
     for setting in declared.settings if declared is not None else ():
         if setting.name in values:
             bare = setting.unit in {"", "text", "bool", "int"}
             shown = "" if bare else unit if setting.unit == "signal" else setting.unit
             rows.append({"name": setting.name, "value": values[setting.name], "unit": shown})
     return rows
+
+
+def _given(kind: str, name: str, rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """The settings that are not what the driver takes by itself."""
+    from drivers import registry
+
+    declared = registry.declared(kind, name)
+    usual = {} if declared is None else {item.name: item.default for item in declared.settings}
+    return [row for row in rows if row["value"] != usual.get(row["name"])]
+
+
+def _convenient(value: float, unit: str) -> tuple[float, str]:
+    """5 mV for 0.005 V and 1 kHz for 1000 Hz: a number that people read at a glance."""
+    if unit not in {"V", "A", "W", "Hz"} or not value or 0.1 <= abs(value) < 1000.0:
+        return value, unit
+    prefixes = (("G", 1e9), ("M", 1e6), ("k", 1e3), ("", 1.0), ("m", 1e-3), ("u", 1e-6))
+    prefix, size = next((row for row in prefixes if abs(value) >= 0.9999 * row[1]), ("n", 1e-9))
+    return value / size, prefix + unit
 
 
 def _stage_facts(spec: BenchSpec) -> list[tuple[str, Any]]:
@@ -234,6 +257,13 @@ def _document(
     return document
 
 
+def _place(url: str) -> str:
+    """A file's path as people write it; another database as its URL, without a password."""
+    if url.startswith("sqlite"):
+        return url.partition(":///")[2]
+    return re.sub(r"(//[^/:@]*):[^/@]*@", r"\1:***@", url)
+
+
 def _words(value: Any) -> str:
     """A fact as text: a quantity, a pair of them, a word."""
     from bench.quantities import show
@@ -241,7 +271,8 @@ def _words(value: Any) -> str:
     if value is None:
         return "not given"
     if isinstance(value, dict):
-        return show(value["value"], value.get("standard_uncertainty"), value["unit"])
+        number, unit = _convenient(value["value"], value["unit"])
+        return show(number, None, unit)
     if isinstance(value, list):
         return " to ".join(_words(item) for item in value)
     return str(value)
@@ -276,7 +307,7 @@ def _show(
         line(kind, f"driver {name}")
         for key, value in facts.get(kind, []):
             line("", f"{key.replace('_', ' '):<20}{_words(value)}")
-        for row in _settings(kind, name, values, spec.detector.unit):
+        for row in _given(kind, name, _settings(kind, name, values, spec.detector.unit)):
             line("", f"{row['name']:<20}{row['value']} {row['unit']}".rstrip())
         if identities is not None and kind in identities:
             who = identities[kind]
@@ -297,7 +328,7 @@ def _show(
         line(
             "",
             f"{source.name:<{width}}  {show(source.mean_wavelength_m * 1e9, None, 'nm'):<11} "
-            f"{' '.join(lengths)} {show(source.signal, None, spec.detector.unit):<10} "
+            f"{' '.join(lengths)} {_words(quantity(source.signal, spec.detector.unit)):<10} "
             f"{show(source.change_time_s, None, 's')}",
         )
     if spec.expect is not None:
@@ -310,6 +341,6 @@ def _show(
         )
         line("expect", f"the zero at {show_length(spec.expect.zero_m)}, {reach}")
     line("glass", spec.glass or "not given")
-    line("records", spec.records_url)
+    line("records", _place(spec.records_url))
     for index, (name, path, title) in enumerate(procedures):
         line("" if index else "runs", f"{name}: {title} ({path})")

@@ -125,7 +125,8 @@ class Bench(Table):
     )
     moving_arm: Literal["A", "B"] | None = Field(None, description='"A" or "B"')
     increasing: Literal["longer", "shorter"] | None = Field(
-        None, description='"longer" or "shorter": what increasing reading makes of the moving arm'
+        None,
+        description='"longer" or "shorter": what the moving arm gets as the reading increases',
     )
     folds: float = Field(
         2.0,
