@@ -38,6 +38,10 @@ __all__ = [
 ]
 
 
+# What of a terminal of 80 columns and 24 lines is left for the problems of a file.
+_SCREEN_COLUMNS, _SCREEN_ROWS, _MOST_PROBLEMS = 80, 18, 16
+
+
 def printable(text: object, limit: int = 300) -> str:
     """``text`` without control characters or bidirectional marks, and of bounded length.
 
@@ -107,9 +111,13 @@ class Problem:
     value: str
     allowed: str
     nearest: str = ""
+    at_line: int | None = None
 
     def line(self) -> str:
-        text = f"{printable(self.path)} = {printable(self.value, 80)}: {printable(self.allowed)}"
+        at = "" if self.at_line is None else f"line {self.at_line}: "
+        text = (
+            f"{at}{printable(self.path)} = {printable(self.value, 80)}: {printable(self.allowed)}"
+        )
         return f"{text} (did you mean {printable(self.nearest, 60)!r}?)" if self.nearest else text
 
 
@@ -121,9 +129,17 @@ class SpecError(InputError):
         self.problems = problems
 
     def lines(self) -> list[str]:
-        shown = [f"  - {problem.line()}" for problem in self.problems[:12]]
-        if len(self.problems) > 12:
-            shown.append(f"  - and {len(self.problems) - 12} more")
+        """As much as fits one screen of 24 lines; ``problems`` holds all of them."""
+        shown: list[str] = []
+        rows = 0
+        for problem in self.problems:
+            row = f"  - {problem.line()}"
+            rows += -(-len(row) // _SCREEN_COLUMNS)
+            if shown and (rows > _SCREEN_ROWS or len(shown) == _MOST_PROBLEMS):
+                more = len(self.problems) - len(shown)
+                shown.append(f"  - and {more} more; `evenarm check --json` names them all")
+                break
+            shown.append(row)
         return [self.what, f"  where: {self.where}", *shown, f"  mend: {self.mend}"]
 
 

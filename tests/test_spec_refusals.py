@@ -18,6 +18,7 @@ from bench.errors import EvenarmError, InputError, Problem, SpecError
 from bench.planning.legs import FINAL_ROOM
 from bench.spec import load_bench
 from bench.spec.checks import SCAN_PACKETS
+from bench.spec.lines import line_of
 from bench.spec.schema import TABLES
 from drivers import registry
 
@@ -106,27 +107,27 @@ CHANGED = [
     ('"1 kHz"', '"1 kHz"\nrange = ["0 V", "5 A"]', "detector.range[1]", "voltage", ""),
     ('"1 kHz"', '"1 kHz"\nrange = ["0 V", "5 V"]\ndark = "6 V"', "detector.dark", "within", ""),
     ('"1 kHz"', '"1 kHz"\nrange = ["0 V", "5 V"]\nnoise = "6 V"', "detector.noise", "smaller", ""),
-    ('"1 kHz"', '"1 kHz"\ndark = "1 nA"', "source[0].signal", "current like detector.dark", ""),
+    ('"1 kHz"', '"1 kHz"\ndark = "1 nA"', 'source "white".signal', "like detector.dark", ""),
     ('"1 kHz"', '"1 kHz"\nnoise = "0 V"', "detector.noise", "more than zero", ""),
     ('"1 kHz"', '"1 kHz"\nsettings = { memry = 5 }', "detector.settings.memry", "", "memory"),
     ('"1 kHz"', '"1 kHz"\nsettings = { memory = 0 }', "detector.settings.memory", "1 or more", ""),
     ('"1 kHz"', '"1 kHz"\nport = "A"', "detector.port", "reserved for later", ""),
-    ('"1 V"', "1", "source[0].signal", "no unit", ""),
-    ('"1 V"', '"0 V"', "source[0].signal", "more than zero", ""),
-    ('"1 V"', '"1 mm"', "source[0].signal", "not a signal", ""),
-    ('"1 V"', '"1 V"\nlaser_class = "3b"', "source[0].laser_class", "as the label says", "3B"),
-    ('"1 V"', '"1 V"\nlaser_class = 2', "source[0].laser_class", "as the label says", ""),
-    ('"1 V"', '"1 V"\nrisk_group = "exemt"', "source[0].risk_group", "exempt", "exempt"),
-    ('"gaussian"', '"gausian"', "source[0].spectrum.shape", "lorentzian", "gaussian"),
-    ('"600 nm"', '"600 mm"', "source[0].spectrum.centre", "200 nm to 20 um", ""),
-    ('"60 nm"', '"60 V"', "source[0].spectrum.fwhm", "not a length", ""),
-    ('"60 nm"', '"2 um"', "source[0].spectrum", "wavelength zero", ""),
-    ('"60 nm"', '"1 uHz"', "source[0].spectrum", "too narrow", ""),
-    (', fwhm = "60 nm"', "", "source[0].spectrum.fwhm", "needs it", ""),
-    ('shape = "gaussian", ', "", "source[0].spectrum.shape", "required", ""),
-    ('shape = "gaussian"', 'file = "a.csv"', "source[0].spectrum", "file stands alone", ""),
-    ('"60 nm" }', '"60 nm", width = 3 }', "source[0].spectrum.width", "no such key", ""),
-    ('"1 V"', '"1 V"\nfile = "a.csv"', "source[0].file", "one of", ""),
+    ('"1 V"', "1", 'source "white".signal', "no unit", ""),
+    ('"1 V"', '"0 V"', 'source "white".signal', "more than zero", ""),
+    ('"1 V"', '"1 mm"', 'source "white".signal', "not a signal", ""),
+    ('"1 V"', '"1 V"\nlaser_class = "3b"', 'source "white".laser_class', "as the label says", "3B"),
+    ('"1 V"', '"1 V"\nlaser_class = 2', 'source "white".laser_class', "as the label says", ""),
+    ('"1 V"', '"1 V"\nrisk_group = "exemt"', 'source "white".risk_group', "exempt", "exempt"),
+    ('"gaussian"', '"gausian"', 'source "white".spectrum.shape', "lorentzian", "gaussian"),
+    ('"600 nm"', '"600 mm"', 'source "white".spectrum.centre', "200 nm to 20 um", ""),
+    ('"60 nm"', '"60 V"', 'source "white".spectrum.fwhm', "not a length", ""),
+    ('"60 nm"', '"2 um"', 'source "white".spectrum', "wavelength zero", ""),
+    ('"60 nm"', '"1 uHz"', 'source "white".spectrum', "too narrow", ""),
+    (', fwhm = "60 nm"', "", 'source "white".spectrum.fwhm', "needs it", ""),
+    ('shape = "gaussian", ', "", 'source "white".spectrum.shape', "required", ""),
+    ('shape = "gaussian"', 'file = "a.csv"', 'source "white".spectrum', "file stands alone", ""),
+    ('"60 nm" }', '"60 nm", width = 3 }', 'source "white".spectrum.width', "no such key", ""),
+    ('"1 V"', '"1 V"\nfile = "a.csv"', 'source "white".file', "one of", ""),
     ("[simulation]", '[expect]\nzero = "12 mm"\n[simulation]', "expect.half_width", "required", ""),
     ("[simulation]", '[expect]\nzero = "12 mm"\nhalf_width = "13 mm"\n[simulation]',
      "expect.zero", "travel, 0 mm to 25 mm", ""),
@@ -149,7 +150,7 @@ CHANGED = [
     ("[simulation]", '[records]\nurl = "mysql://x/y"\n[simulation]', "records.url", "sqlite", ""),
     ("[simulation]", '[records]\nurl = "sqlite:///:memory:"\n[simulation]', "records.url",
      "kept in a file", ""),
-    ("[simulation]", '[changer]\ndriver = "simulated"\n[simulation]', "source[0].position",
+    ("[simulation]", '[changer]\ndriver = "simulated"\n[simulation]', 'source "white".position',
      "required", ""),
     ("[simulation]", "[simulatoin]\n[simulation]", "simulatoin", "no such key", "simulation"),
     ("[simulation]", "[simulation]\nseed = -1", "simulation.seed", "whole number", ""),
@@ -198,7 +199,7 @@ def test_all_problems_of_a_file_at_once(tmp_path: Path) -> None:
     found = {problem.path for problem in problems(tmp_path, text)}
     assert found == {
         "bench.path_factor", "stage.travel", "stage.driver", "stage.role", "detector.rate",
-        "detector.settings.memry", "source[0].spectrum.fwhm", "glass.material", "mount",
+        "detector.settings.memry", 'source "white".spectrum.fwhm', "glass.material", "mount",
         "simulatoin", "simulation.world",
     }  # fmt: skip
 
@@ -206,13 +207,13 @@ def test_all_problems_of_a_file_at_once(tmp_path: Path) -> None:
 def test_two_sources_of_one_name(tmp_path: Path) -> None:
     again = SMALL[SMALL.index("[[source]]") : SMALL.index("[simulation]")]
     (problem,) = problems(tmp_path, SMALL.replace("[simulation]", again + "[simulation]"))
-    assert problem.path == "source[1].name"
-    assert "source[0]" in problem.allowed
+    assert problem.path == "source 2.name"
+    assert "source 1 has" in problem.allowed
 
 
 def test_an_empty_table_lists_what_is_required(tmp_path: Path) -> None:
     found = [problem.path for problem in problems(tmp_path, "[bench]\n")]
-    assert found == ["bench.name", "[stage]", "[detector]", "[[source]]", "bench.path_factor"]
+    assert found == ["bench.name", "bench.path_factor", "[stage]", "[detector]", "[[source]]"]
 
 
 def test_a_seed_of_the_command_line_is_checked(tmp_path: Path) -> None:
@@ -398,3 +399,73 @@ def test_no_packet_is_measured_with_a_path_factor_that_cannot_be(tmp_path: Path)
 
 def test_the_plan_draws_scans_of_the_length_that_is_asked_for() -> None:
     assert 2 * FINAL_ROOM == SCAN_PACKETS
+
+
+FAULTY_ALL_OVER = """
+[bench]
+name = "small"
+path_factor = 2
+colour = 5
+reference_wavelength = "600 nm"
+[stage]
+driver = "simulatd"
+travel = ["0 mm", "25 mm"]
+longest_move = "5"
+approach = "up"
+[detector]
+driver = "simulated"
+rate = "1 kHz"
+integration = "2 ms"
+lag = "nix"
+[[source]]
+name = "halogen"
+spectrum = { shape = "gaussian", centre = "600 nm", fwhm = "60 nm" }
+laser_class = 1
+[[source]]
+name = "halogen"
+spectrum = { shape = "gaussian", centre = "600 nm", fwhm = "60 nm" }
+signal = "1 A"
+[expect]
+zero = "30 mm"
+half_width = "5"
+[glass]
+material = "butter"
+[simulation]
+world = "world.toml"
+"""
+
+
+def test_a_faulty_key_hides_no_fault_of_another(tmp_path: Path) -> None:
+    found = {problem.path: problem for problem in problems(tmp_path, FAULTY_ALL_OVER)}
+    assert set(found) == {
+        "bench.colour", "stage.driver", "stage.speed", "stage.longest_move", "stage.approach",
+        "detector.integration", "detector.lag", "source 1.signal", "source 1.laser_class",
+        "source 2.name", "expect.zero", "expect.half_width", "glass.material",
+    }  # fmt: skip
+    assert 'such as "5 mm"' in found["stage.longest_move"].allowed
+    assert 'laser_class = "1"' in found["source 1.laser_class"].allowed
+    lines = FAULTY_ALL_OVER.splitlines()
+    for path, problem in found.items():
+        assert problem.at_line is not None, path
+        line = lines[problem.at_line - 1]
+        assert line.startswith((path.rpartition(".")[2], "[stage]", "[[source]]")), path
+        assert problem.line().startswith(f"line {problem.at_line}: {path} = ")
+
+
+def test_no_lines_are_told_where_they_cannot_be_told_simply() -> None:
+    text = '[a]\nb = """\nc = 1\n"""\nc = 2\n'
+    assert line_of(text, "a.c", {}) is None
+    assert line_of("[a]\nb.c = 1 # d\n'e' = 2\n", "a.b.c", {}) == 2
+    assert line_of("[a]\nb.c = 1 # d\n'e' = 2\n", "a.e[1]", {}) == 3
+    assert line_of("[a]\nb = 1\n", "[c]", {}) is None
+
+
+def test_the_text_fits_a_screen_and_the_document_holds_all(tmp_path: Path) -> None:
+    text = SMALL + "".join(f"[unknown{i}]\n" for i in range(40))
+    with pytest.raises(SpecError) as caught:
+        load(tmp_path, text)
+    assert len(caught.value.problems) == 40
+    lines = caught.value.lines()
+    assert 12 <= len(lines) < 24
+    assert sum(-(-len(line) // 80) for line in lines) <= 24
+    assert "more; `evenarm check --json` names them all" in lines[-2]

@@ -37,6 +37,9 @@ _KEYS = {
 }
 
 
+FACTOR_KEYS = ("bench.path_factor", "bench.moving_arm", "bench.increasing", "bench.folds")
+
+
 def is_reserved(name: str, value: object) -> bool:
     """Whether this form of a known table is one that is reserved."""
     return name in _ARRAYS and isinstance(value, list)
@@ -62,21 +65,19 @@ def path_factor(table: schema.Bench | None, raw: object, problems: Problems) -> 
     """
     from bench.spec.schema import Bench
 
-    if not isinstance(raw, Mapping):
+    if not isinstance(raw, Mapping) or table is None:
         return 1.0
     worded = [key for key in ("moving_arm", "increasing", "folds") if key in raw]
     field = Bench.model_fields["path_factor"].description or ""
     if not worded and "path_factor" not in raw:
         problems.missing("bench.path_factor", f"{field}; or moving_arm and increasing")
-    if table is None:
-        return 1.0
-    if table.path_factor is not None:
+    if "path_factor" in raw:
         if worded:
             problems.add(
                 f"bench.{worded[0]}", raw[worded[0]], "path_factor says it already; keep one"
             )
-        return table.path_factor
-    if not worded:
+        return table.path_factor or 1.0
+    if not worded or problems.about(*FACTOR_KEYS):
         return 1.0
     for key in ("moving_arm", "increasing"):
         if key not in raw:
@@ -85,28 +86,32 @@ def path_factor(table: schema.Bench | None, raw: object, problems: Problems) -> 
     return table.folds if longer else -table.folds
 
 
-def sources(built: Sequence[SourceSpec | None], has_changer: bool, problems: Problems) -> None:
-    """No name twice; with a changer, a position for each and none twice."""
-    seen: dict[str, int] = {}
-    positions: dict[str, int] = {}
-    for index, source in enumerate(built):
+def sources(
+    rows: Sequence[tuple[str, schema.Source | None]], has_changer: bool, problems: Problems
+) -> None:
+    """No name twice; with a changer, a position for each and none twice. Rows are path, table."""
+    seen: dict[str, str] = {}
+    positions: dict[str, str] = {}
+    for path, source in rows:
         if source is None:
             continue
         if source.name in seen:
-            allowed = f"source[{seen[source.name]}] has that name already"
-            problems.add(f"source[{index}].name", source.name, allowed)
-        seen.setdefault(source.name, index)
-        if has_changer and source.position is None:
-            problems.missing(f"source[{index}].position", "where the changer has it, as text")
+            problems.add(f"{path}.name", source.name, f"{seen[source.name]} has that name already")
+        elif source.name is not None:
+            seen[source.name] = path
         if source.position is not None and source.position in positions:
-            allowed = f"source[{positions[source.position]}] is there already"
-            problems.add(f"source[{index}].position", source.position, allowed)
+            allowed = f"{positions[source.position]} is there already"
+            problems.add(f"{path}.position", source.position, allowed)
         elif source.position is not None:
-            positions[source.position] = index
+            positions[source.position] = path
+        elif has_changer and not problems.about(f"{path}.position"):
+            problems.missing(f"{path}.position", "where the changer has it, as text")
 
 
 def signal_unit(
-    table: schema.Detector | None, tables: Sequence[schema.Source | None], problems: Problems
+    table: schema.Detector | None,
+    rows: Sequence[tuple[str, schema.Source | None]],
+    problems: Problems,
 ) -> str:
     """The SI unit of the detector's signal; every signal of the file must measure the same.
 
@@ -117,11 +122,7 @@ def signal_unit(
         if table.range is not None:
             stated += [(f"detector.range[{end}]", table.range[end]) for end in (0, 1)]
         stated += [(f"detector.{key}", getattr(table, key)) for key in ("dark", "noise")]
-    stated += [
-        (f"source[{index}].signal", source.signal)
-        for index, source in enumerate(tables)
-        if source is not None
-    ]
+    stated += [(f"{row}.signal", source.signal) for row, source in rows if source is not None]
     first: tuple[str, str] | None = None
     for path, quantity in stated:
         if quantity is None:
@@ -140,7 +141,8 @@ def stage_and_expect(tables: Mapping[str, Any], raw: Mapping[str, Any], problems
     """Moves fit into the travel, and the zero is expected within it."""
     stage: schema.Stage | None = tables.get("stage")
     table: schema.Expect | None = tables.get("expect")
-    if table is not None:
+    keys = ("expect.zero", "expect.half_width", "expect.standard_uncertainty")
+    if table is not None and not problems.about(*keys):
         uncertain = bool(table.zero.standard_uncertainty)
         if table.half_width is not None and table.standard_uncertainty is not None:
             problems.add(
@@ -159,12 +161,14 @@ def stage_and_expect(tables: Mapping[str, Any], raw: Mapping[str, Any], problems
         if value is not None and value > high - low:
             allowed = f"must fit into the travel, {limits}"
             problems.add(f"stage.{key}", raw["stage"].get(key, show_length(value)), allowed)
-    if table is None:
+    if table is None or table.zero is None:
         return
     half = table.half_width or 0.0
     slack = 1e-9 * (high - low)
     if not (low - slack <= table.zero.si - half and table.zero.si + half <= high + slack):
-        reach = f"{show_length(table.zero.si - half)} to {show_length(table.zero.si + half)}"
+        reach = show_length(table.zero.si)
+        if half:
+            reach = f"{show_length(table.zero.si - half)} to {show_length(table.zero.si + half)}"
         problems.add(
             "expect.zero",
             raw["expect"]["zero"],
@@ -185,7 +189,8 @@ def longest_move(
     itself is as short, or no packet fits into it, the plan says what cannot be done.
     """
     stage: schema.Stage | None = tables.get("stage")
-    unknown = any(problem.path.startswith("bench.") for problem in problems.found)
+    needed = (*FACTOR_KEYS, "bench", "[bench]", "stage.longest_move", "stage.reversal_allowance")
+    unknown = any(problem.path in needed for problem in problems.found)
     if stage is None or stage.travel is None or unknown or not sources or None in sources:
         return
     length_m = min(source.coherence_fwhm_m for source in sources if source is not None)
@@ -205,8 +210,9 @@ def detector(table: schema.Detector | None, raw: Mapping[str, Any], problems: Pr
     """A reading ends before the next begins; dark and noise are possible within the range."""
     if table is None:
         return
-    if table.integration is not None and table.integration * table.rate > 1 + 1e-9:
-        longest = show(1e3 / table.rate, None, "ms")
+    rate_hz: float | None = table.rate
+    if table.integration and rate_hz and table.integration * rate_hz > 1 + 1e-9:
+        longest = show(1e3 / rate_hz, None, "ms")
         problems.add(
             "detector.integration",
             raw["detector"]["integration"],
@@ -222,11 +228,13 @@ def detector(table: schema.Detector | None, raw: Mapping[str, Any], problems: Pr
 
 
 def glass(
-    tables: Mapping[str, Any], built: Sequence[SourceSpec | None], problems: Problems
+    tables: Mapping[str, Any],
+    built: Sequence[tuple[str, SourceSpec | None]],
+    problems: Problems,
 ) -> str | None:
     """The material's name as the catalogue writes it, where its index is known for every source."""
     table: schema.Glass | None = tables.get("glass")
-    if table is None:
+    if table is None or problems.about("glass.material"):
         return None
     from bench.optics import glass as catalogue
 
@@ -240,8 +248,8 @@ def glass(
     bench: schema.Bench | None = tables.get("bench")
     wanted = [("bench.reference_wavelength", bench.reference_wavelength if bench else None)]
     wanted += [
-        (f"source[{index}].spectrum", 1.0 / edge)
-        for index, source in enumerate(built)
+        (f"{row}.spectrum", 1.0 / edge)
+        for row, source in built
         if source is not None
         for edge in source.band
     ]
@@ -261,7 +269,7 @@ def records_url(
     """Where the journal is, a relative SQLite file counted from ``folder``."""
     if records_folder is not None:
         return f"sqlite:///{records_folder.absolute() / 'journal.sqlite3'}"
-    if table is None:
+    if table is None or problems.about("records.url"):
         return ""
     scheme, mark, rest = table.url.partition("://")
     if not mark or scheme.split("+")[0] not in {"sqlite", "postgresql"}:

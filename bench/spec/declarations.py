@@ -14,7 +14,7 @@ from typing import Any, Protocol
 
 from bench.errors import QuantityError
 from bench.quantities import parse_in
-from bench.spec.problems import Problems, nearest
+from bench.spec.problems import Problems, nearest, row_paths
 
 __all__ = ["Declared", "Setting", "check_table"]
 
@@ -90,8 +90,8 @@ def _array(
         problems.add(path, raw, f"must be tables [[{path.rpartition(' ')[2]}]]")
         return []
     return [
-        _flat(item, inner, f"{path}[{index}].", signal_unit, problems, set())
-        for index, item in enumerate(raw)
+        _flat(item, inner, f"{row}.", signal_unit, problems, set())
+        for row, item in zip(row_paths(path, raw), raw, strict=True)
     ]
 
 

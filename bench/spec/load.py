@@ -9,10 +9,11 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from bench.errors import InputError, SpecError
+from bench.errors import InputError, Problem, SpecError
+from bench.spec.lines import line_of
 from bench.spec.model import BenchSpec, ClimateSpec, SimulationSpec, SourceSpec
-from bench.spec.problems import Problems, nearest
-from bench.spec.reading import read_toml
+from bench.spec.problems import Problems, nearest, row_paths
+from bench.spec.reading import LARGEST_BYTES, read_text, read_toml
 
 if TYPE_CHECKING:
     from bench.spec import schema
@@ -76,16 +77,17 @@ def load_bench(
     tables = _tables(raw, problems)
     rows = _source_tables(raw, problems)
     sources = [
-        None if row is None else build_source(row, raw["source"][i], i, path.parent, problems)
-        for i, row in enumerate(rows)
+        None if row is None else build_source(row, raw["source"][i], name, path.parent, problems)
+        for i, (name, row) in enumerate(rows)
     ]
-    checks.sources(sources, "changer" in raw, problems)
+    checks.sources(rows, "changer" in raw, problems)
     unit = checks.signal_unit(tables.get("detector"), rows, problems)
     path_factor = checks.path_factor(tables.get("bench"), raw.get("bench"), problems)
     checks.stage_and_expect(tables, raw, problems)
     checks.longest_move(tables, raw, sources, path_factor, problems)
     checks.detector(tables.get("detector"), raw, problems)
-    glass = checks.glass(tables, sources, problems)
+    named = [(name, source) for (name, _), source in zip(rows, sources, strict=True)]
+    glass = checks.glass(tables, named, problems)
     climate = _climate(tables, problems)
     settings, drivers = _drivers(raw, declared, known_drivers, unit, problems)
     simulation, world = _world(tables, raw, drivers, path, unit, seed, sources, problems)
@@ -95,13 +97,28 @@ def load_bench(
         raise SpecError(
             f"{what} has {number} problem{'s' * (number != 1)}",
             where=str(path),
-            problems=tuple(problems.found),
+            problems=_with_lines(problems, path, raw),
             mend="mend the keys named above; `evenarm check` reads the file again",
         )
     return _spec(
         path, sha256, tables, tuple(s for s in sources if s is not None), path_factor, glass,
         climate, settings, drivers, simulation, world, url, unit,
     )  # fmt: skip
+
+
+def _with_lines(problems: Problems, path: Path, raw: Mapping[str, Any]) -> tuple[Problem, ...]:
+    """The problems with the lines of bench.toml where their keys stand, in that order."""
+    from dataclasses import replace
+
+    text, _ = read_text(path, "the bench description", _MEND)
+    rows = {"source": row_paths("source", raw.get("source"))}
+    placed = [
+        problem
+        if ": " in problem.path  # it stands in another file
+        else replace(problem, at_line=line_of(text, problem.path, rows))
+        for problem in problems.found
+    ]
+    return tuple(sorted(placed, key=lambda problem: problem.at_line or LARGEST_BYTES))
 
 
 def _tables(raw: Mapping[str, Any], problems: Problems) -> dict[str, Any]:
@@ -126,8 +143,10 @@ def _tables(raw: Mapping[str, Any], problems: Problems) -> dict[str, Any]:
     return found
 
 
-def _source_tables(raw: Mapping[str, Any], problems: Problems) -> list[schema.Source | None]:
-    """One entry for each [[source]] of the file; None for one with problems."""
+def _source_tables(
+    raw: Mapping[str, Any], problems: Problems
+) -> list[tuple[str, schema.Source | None]]:
+    """Path and table of each [[source]] of the file; None for one that is no table."""
     from bench.spec import schema
 
     rows = raw.get("source", [])
@@ -135,7 +154,11 @@ def _source_tables(raw: Mapping[str, Any], problems: Problems) -> list[schema.So
         if "source" in raw:
             problems.add("source", rows, "must be one or more tables [[source]]")
         return []
-    return [problems.table(schema.Source, row, f"source[{i}]") for i, row in enumerate(rows)]
+    paths = row_paths("source", rows)
+    return [
+        (path, problems.table(schema.Source, row, path))
+        for path, row in zip(paths, rows, strict=True)
+    ]
 
 
 def _climate(tables: Mapping[str, Any], problems: Problems) -> ClimateSpec | None:
@@ -144,7 +167,9 @@ def _climate(tables: Mapping[str, Any], problems: Problems) -> ClimateSpec | Non
         return None
     if table.driver is None:
         for key in ("temperature", "pressure", "humidity"):
-            if getattr(table, key) is None:
+            if getattr(table, key) is None and not problems.about(
+                f"climate.{key}", "climate.driver"
+            ):
                 problems.missing(f"climate.{key}", "where no driver measures it")
     return ClimateSpec(
         driver=table.driver,
@@ -214,7 +239,7 @@ def _world(
     if not simulated:
         return None, {}
     table = tables.get("simulation")
-    if table is None:
+    if table is None or table.world is None:
         if "simulation" not in raw:
             problems.missing("[simulation]", 'simulated devices need it: world = "world.toml"')
         return None, {}
@@ -236,10 +261,11 @@ def _world(
         problems=problems,
     )
     names = [source.name for source in sources if source is not None]
-    for index, row in enumerate(world.get("source", [])):
+    written = tree.get("source", [])
+    for place, row in zip(row_paths("source", written), world.get("source", []), strict=False):
         name = row.get("name")
         if isinstance(name, str) and name not in names and None not in sources:
-            where = f"{table.world}: source[{index}].name"
+            where = f"{table.world}: {place}.name"
             problems.add(where, name, "is no [[source]] of bench.toml", nearest(name, names))
     return simulation, world
 

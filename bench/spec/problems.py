@@ -6,7 +6,7 @@ import difflib
 import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Any, TypeVar
+from typing import TYPE_CHECKING, Annotated, Any, TypeVar, cast
 
 from bench.errors import Problem
 
@@ -15,7 +15,7 @@ if TYPE_CHECKING:
 
 T = TypeVar("T", bound="Table")
 
-__all__ = ["Problems", "nearest", "written"]
+__all__ = ["Problems", "nearest", "row_paths", "written"]
 
 
 def nearest(word: str, known: Iterable[str]) -> str:
@@ -23,6 +23,21 @@ def nearest(word: str, known: Iterable[str]) -> str:
     folded = {name.casefold(): name for name in known}
     near = difflib.get_close_matches(word.casefold(), folded, 1, 0.55)
     return folded[near[0]] if near else ""
+
+
+def row_paths(name: str, rows: object) -> list[str]:
+    """How messages call the tables of an array: ``source "white"``, or ``source 2`` of several.
+
+    A number, from 1, where there is no name of its own or the name is too long to be read.
+    """
+    tables = rows if isinstance(rows, list) else []
+    names = [row.get("name") if isinstance(row, dict) else None for row in tables]
+    return [
+        f'{name} "{given}"'
+        if isinstance(given, str) and 0 < len(given) <= 40 and names.count(given) == 1
+        else f"{name} {number}"
+        for number, given in enumerate(names, 1)
+    ]
 
 
 def written(value: object) -> str:
@@ -62,8 +77,20 @@ class Problems:
         allowed = "no such key" if near or not known else f"no such key; known: {', '.join(known)}"
         self.add(path, value, allowed, near)
 
+    def about(self, *paths: str) -> bool:
+        """Whether something is wrong already at one of these paths, or below it."""
+        return any(
+            problem.path == path or problem.path.startswith((f"{path}.", f"{path}["))
+            for problem in self.found
+            for path in paths
+        )
+
     def table(self, model: type[T], raw: object, path: str) -> T | None:
-        """``raw`` as a table of that kind; None, and problems added, where it is not one."""
+        """``raw`` as a table of that kind; None where it is no table at all.
+
+        Keys that are missing or wrong become problems and stand as None, so that what does not
+        depend on them is checked all the same.
+        """
         from pydantic import ValidationError
 
         if not isinstance(raw, dict):
@@ -72,9 +99,10 @@ class Problems:
         try:
             return model.model_validate(raw)
         except ValidationError as error:
-            for row in error.errors(include_url=False, include_context=False):
+            wrong = error.errors(include_url=False)
+            for row in wrong:
                 self._pydantic(model, path, dict(row))
-            return None
+            return _part(model, raw, {row["loc"][0] for row in wrong if row["loc"]})
 
     def _pydantic(self, model: type[Table], path: str, row: dict[str, Any]) -> None:
         location = [part for part in row["loc"] if not _of_a_union(part)]
@@ -95,13 +123,40 @@ class Problems:
         elif kind == "missing":
             self.missing(full, description)
         elif kind == "evenarm":
-            self.add(full, row["input"], row["msg"])
+            self.add(full, row["input"], row["msg"] + _how(row.get("ctx", {}), description))
         elif kind == "literal_error":
             choices = re.findall(r'"([^"]+)"', description) or re.findall(r"\w+", description)
+            if not isinstance(row["input"], str) and str(row["input"]) in choices:
+                allowed = f'must be text in quotes, {key} = "{row["input"]}"; {description}'
+                self.add(full, row["input"], allowed)
+                return
             near = nearest(str(row["input"]), choices)
             self.add(full, row["input"], f"must be {description}", near)
         else:
             self.add(full, row["input"], f"{_plain(row)}; {description}".rstrip("; "))
+
+
+def _part(model: type[T], raw: dict[str, Any], wrong: set[Any]) -> T:
+    """A table of the keys that are right; None for the others."""
+    from pydantic import TypeAdapter
+
+    values: dict[str, Any] = {}
+    for key, known in model.model_fields.items():
+        if key in wrong or (key not in raw and known.is_required()):
+            values[key] = None
+        elif key in raw:
+            kind: Any = Annotated[known.annotation, None, *known.metadata]
+            values[key] = TypeAdapter(kind).validate_python(raw[key])
+    return cast(T, model.model_construct(**values))
+
+
+def _how(context: dict[str, Any], description: str) -> str:
+    """How to write it: with the key's own example where its description has one."""
+    mend = str(context.get("mend", ""))
+    example = re.search(r'such as (\[[^\]]*\]|"[^"]*")', description)
+    if mend and example and ' "' in mend:
+        mend = mend[: mend.index(' "')] + f" {example[1]}"
+    return f" - {mend}" if mend else ""
 
 
 def _plain(row: dict[str, Any]) -> str:

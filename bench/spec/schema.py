@@ -18,9 +18,9 @@ from bench.quantities import Quantity, parse
 WAVELENGTHS_M = (0.2e-6, 20e-6)
 
 
-def refused(text: str) -> PydanticCustomError:
-    """An error whose text is shown as it is."""
-    return PydanticCustomError("evenarm", "{text}", {"text": text})
+def refused(text: str, mend: str = "") -> PydanticCustomError:
+    """An error whose text is shown as it is, and then how to mend it."""
+    return PydanticCustomError("evenarm", "{text}", {"text": text, "mend": mend})
 
 
 def _quantity(
@@ -30,8 +30,8 @@ def _quantity(
         found = parse(text, dimension)
     except QuantityError as error:
         # Brackets in one line: the message stands in a list of problems.
-        parts = [error.what, error.why and f"({error.why})", error.mend and f"- {error.mend}"]
-        raise refused(" ".join(part for part in parts if part)) from None
+        parts = [error.what, error.why and f"({error.why})"]
+        raise refused(" ".join(part for part in parts if part), error.mend) from None
     if not found.si > above or not least <= found.si <= most:
         raise refused(f"must be {limits}")
     return found

@@ -32,10 +32,9 @@ __all__ = ["build_source"]
 
 
 def build_source(
-    table: schema.Source, raw: object, index: int, folder: Path, problems: Problems
+    table: schema.Source, raw: object, path: str, folder: Path, problems: Problems
 ) -> SourceSpec | None:
     """The source in SI numbers; None, and problems added, where its spectrum cannot be had."""
-    path = f"source[{index}]"
     described = _described(table, raw, path, problems)
     if described is None:
         return None
@@ -65,6 +64,8 @@ def _described(
     table: schema.Source, raw: object, path: str, problems: Problems
 ) -> dict[str, Any] | None:
     """The spectrum in the words of ``for_drivers``, or {"file": name}."""
+    if problems.about(f"{path}.spectrum", f"{path}.file"):
+        return None
     given = table.spectrum
     if (given is None) == (table.file is None):
         allowed = 'one of spectrum = { .. } and file = ".."'
@@ -130,7 +131,7 @@ def _spec(table: schema.Source, spectrum: Spectrum, described: Mapping[str, Any]
         name=table.name,
         wavenumber=spectrum.wavenumber,
         power=spectrum.power,
-        signal=table.signal.si,
+        signal=math.nan if table.signal is None else table.signal.si,
         change_time_s=table.change_time,
         warm_up_s=table.warm_up,
         laser_class=table.laser_class,
