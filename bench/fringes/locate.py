@@ -25,15 +25,19 @@ from bench.fringes.model import (
     Notice,
     Scan,
 )
-from bench.fringes.notices import at_the_edge, notices_of
+from bench.fringes.notices import at_the_edge, is_cut, notices_of
 from bench.fringes.results import Solution
 from bench.fringes.solve import solve
 from bench.fringes.trend import flat_tops, lone_spikes, robust_spread, slow_level
-from bench.fringes.verdict import EVERYWHERE, LINE, judge
+from bench.fringes.verdict import CUT, EVERYWHERE, LINE, SLOW, judge
 from bench.fringes.window import LEAST_CLEAR, Window, clear_margin, lit, settle
 
 LEAST_READINGS = 24
 DROWNED = 0.3  # of a steady line
+CONSTANT = "the signal is constant"
+NO_LIGHT = "no light: the detector sees only its dark level"
+DARK = 2.0  # standard deviations of a reading that the dark level itself may be off
+DARK_ALL = 7.0  # one of a million readings is that far off by noise and the dark level together
 IN_STEP = (
     "the readings fall in step with the fringes, which fold onto themselves: "
     "scan again with another spacing of the readings"
@@ -51,6 +55,27 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
     """
     known = knowledge if knowledge is not None else Knowledge()
     x, signal, notices = _usable(scan)
+    if x.size and float(np.ptp(signal)) == 0.0:
+        return Located(found=False, reason=CONSTANT, noise=0.0, notices=tuple(notices))
+    located = _locate(scan, known, x, signal, notices)
+    if not located.found and _without_light(signal, scan.dark, known.noise):
+        return replace(located, reason=NO_LIGHT)
+    return located
+
+
+def _without_light(signal: FloatArray, dark: float | None, noise: float | None) -> bool:
+    """Whether all readings lie within a few standard deviations of the dark level."""
+    if dark is None or not signal.size:
+        return False
+    # differences of neighbours tell the noise whatever the level does
+    noise = noise or robust_spread(np.diff(signal)) / math.sqrt(2.0)
+    level = abs(float(np.median(signal)) - dark)
+    return level < DARK * noise and float(np.max(np.abs(signal - dark))) < DARK_ALL * noise
+
+
+def _locate(
+    scan: Scan, known: Knowledge, x: FloatArray, signal: FloatArray, notices: list[Notice]
+) -> Located:
     if x.size < LEAST_READINGS or x[-1] <= x[0]:
         reason = f"only {x.size} usable readings; at least {LEAST_READINGS} are needed"
         return Located(found=False, reason=reason, notices=tuple(notices))
@@ -77,6 +102,8 @@ def locate(scan: Scan, knowledge: Knowledge | None = None) -> Located:
         window = settle(u, flat, candidate, band_known=band is not None)
     reason, false_alarm = judge(u, flat, candidate, window, band_known=band is not None)
     if reason or window is None:
+        if window is not None and reason in (SLOW, EVERYWHERE) and is_cut(u, window, flat):
+            reason = CUT
         if reason in (EVERYWHERE, LINE):
             notices.append(Notice("monochromatic", reason))
         weakest = _weakest_contrast(candidate, signal, scan.dark)
@@ -227,7 +254,8 @@ def _refused(
     return Located(
         found=False,
         reason=reason,
-        noise=robust_spread(flat),
+        # of endless fringes the spread is the fringes' own: it says nothing of the noise
+        noise=math.nan if reason in (EVERYWHERE, LINE, IN_STEP) else robust_spread(flat),
         false_alarm_probability=false_alarm,
         weakest_contrast=weakest,
         notices=tuple(notices),

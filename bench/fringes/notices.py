@@ -15,6 +15,8 @@ from bench.fringes.zero import PacketFit
 
 NEAR_END = 1.1  # of the envelope's full width: nearer to the scan's end than this is cut
 LOST = 0.4  # nearer than this, the maximum itself may lie outside
+QUIET = 0.3  # of the spread in the window, elsewhere: fringes that are not everywhere
+QUIET_READINGS = 24
 SECOND = 0.15  # of the first packet's amplitude
 
 
@@ -33,7 +35,7 @@ def at_the_edge(
     if astray > width:
         # the fit and the search saw different things: neither is trusted to better than that
         zero = Estimate(zero.value, math.hypot(zero.standard_uncertainty, astray))
-    near = min(window.peak - float(u[0]), float(u[-1]) - window.peak) / width
+    near = _to_end(u, window)
     if near > NEAR_END:
         return zero, []
     text = "the packet is cut by the end of the scan; scan on past it"
@@ -46,6 +48,19 @@ def at_the_edge(
         return Estimate(window.peak - fit.origin, 0.25 * width), [Notice("edge", text)]
     more = math.hypot(0.05 * width * (NEAR_END - near), 0.5 * apart)
     return Estimate(zero.value, math.hypot(zero.standard_uncertainty, more)), [Notice("edge", text)]
+
+
+def is_cut(u: FloatArray, window: Window, flat: FloatArray) -> bool:
+    """Whether the scan ends before the packet of the window does, and is quiet elsewhere."""
+    outside = np.concatenate([flat[: window.first], flat[window.stop :]])
+    if _to_end(u, window) > NEAR_END or outside.size < QUIET_READINGS:
+        return False
+    return float(np.std(outside)) < QUIET * float(np.std(flat[window.first : window.stop]))
+
+
+def _to_end(u: FloatArray, window: Window) -> float:
+    """From the envelope's maximum to the nearer end of the scan, in its full widths."""
+    return min(window.peak - float(u[0]), float(u[-1]) - window.peak) / window.width
 
 
 def notices_of(

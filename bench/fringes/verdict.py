@@ -17,6 +17,7 @@ EVERYWHERE = "fringes everywhere, no packet"
 NOTHING = "nothing rises above the noise like a packet"
 STEP = "the signal jumps there: a step, not a packet"
 SLOW = "the signal wanders there without fringes of its own: no packet"
+CUT = "what may be a packet is cut by the end of the scan: scan on past it"
 LINE = "the fringes there are a line's, not the source's: no packet"
 FEW_PLACES = 10.0
 STRENGTH = 1e-2  # beside the search, whose own false alarms are fewer than ACCEPT
