@@ -85,24 +85,32 @@ def wild_readings(residual: FloatArray, limit: float = 6.0) -> BoolArray:
     return np.asarray(np.abs(residual) > limit * np.repeat(np.maximum(usual, floor), size)[:n])
 
 
-def covariance(fit: PacketFit, variance: FloatArray) -> FloatArray:
+def covariance(fit: PacketFit, variance: FloatArray, *, broad: bool = False) -> FloatArray:
     """Covariance of all parameters (p, p): the largest of three views of the noise.
 
     By the fitted noise shares scaled to the residuals; by each residual itself (leverage-corrected,
     HC3 of MacKinnon & White 1985, from memory); and by residuals with their correlation over a
     few neighbours (Bartlett weights, Newey & West 1987, from memory). Largest by the variance of
-    the shift, since that is what people rely on.
+    the shift, since that is what people rely on. ``broad``: a fit of much of the spectrum feels
+    positions that are wrong together over a longer stretch (read-backs joined by straight lines),
+    so correlation is followed over several lengths and the worst one taken.
     """
     misfit = float(np.sum(fit.residual**2 / variance)) / max(1, fit.freedom)
     by_shares = (fit.gain * (variance * max(misfit, 1.0))) @ fit.gain.T
     push = fit.gain * (fit.residual / np.maximum(1.0 - fit.leverage, 0.2))
     by_residual = push @ push.T
     lags = int(min(max(2, round(1.5 * fit.residual.size ** (1 / 3))), 40))
-    correlated = (fit.gain * fit.residual) @ (fit.gain * fit.residual).T
+    correlated = [_correlated(fit, lags)]
+    if broad:
+        correlated += [_correlated(fit, min(n * lags, fit.residual.size // 4)) for n in (3, 6)]
+    views = [by_shares, by_residual, *correlated]
+    return np.asarray(max(views, key=lambda view: float(view[-2, -2])), dtype=np.float64)
+
+
+def _correlated(fit: PacketFit, lags: int) -> FloatArray:
     plain = fit.gain * fit.residual
+    total = plain @ plain.T
     for lag in range(1, lags + 1):
         cross = plain[:, lag:] @ plain[:, :-lag].T
-        correlated = correlated + (1.0 - lag / (lags + 1.0)) * (cross + cross.T)
-    correlated *= fit.residual.size / max(1, fit.freedom)
-    views = [by_shares, by_residual, correlated]
-    return np.asarray(max(views, key=lambda view: float(view[-2, -2])), dtype=np.float64)
+        total = total + (1.0 - lag / (lags + 1.0)) * (cross + cross.T)
+    return np.asarray(total * fit.residual.size / max(1, fit.freedom), dtype=np.float64)

@@ -45,7 +45,7 @@ def solve(
     if wider is not None:
         whole = _rounds(part, values, wider.fit, wider, known, per_m, prior)
         if known.light is not None or _explains_more(whole.fit, solution.fit):
-            solution, window = whole, wider
+            solution, window = _wary(whole), wider
     error = slow_position_error(part, solution.fit)
     if error is None:
         return solution
@@ -63,6 +63,15 @@ def solve(
         if more is not None:
             error = error + more
     return replace(solution, ruled=True)
+
+
+def _wary(whole: Solution) -> Solution:
+    """With what holding the many amplitudes may have moved the shift by, in its uncertainty."""
+    if whole.unheld is None:
+        return whole
+    cov = whole.covariance.copy()
+    cov[-2, -2] += (whole.fit.shift - whole.unheld.fit.shift) ** 2
+    return replace(whole, covariance=cov)
 
 
 def _explains_more(more: PacketFit, less: PacketFit) -> bool:
@@ -146,7 +155,7 @@ def _rounds(
         variance = np.maximum(variance, 1e-3 * float(np.mean(variance)))
         wild |= np.abs(fit.residual) > OUTLIER * np.sqrt(variance)
         variance = np.where(wild, np.maximum(fit.residual**2, variance), variance)
-        solution = Solution(fit, covariance(fit, variance), shares)
+        solution = Solution(fit, covariance(fit, variance, broad=start.size is not None), shares)
         sizes = _expected_sizes(solution)
         used = weight
         weight = np.where(wild, 1e-4, 1.0) / variance
