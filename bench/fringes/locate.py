@@ -110,13 +110,17 @@ def _locate(
         return _refused(reason, false_alarm, notices, flat, weakest)
     off = np.ones(u.size, dtype=bool)
     off[window.first : window.stop] = False
-    hum = remove_lines(u, flat, off)
+    light = None
+    if known.light is not None and per_m is not None:
+        light = (known.light[0] * per_m, known.light[1] * per_m)
+    # the foot of a broad packet reaches out of the window, and is not hum
+    broad = light is not None and lit(u, flat, window, light) is not None
+    hum = remove_lines(u, flat, off, light if broad else None)
     if bool(np.any(hum)):
         signal, flat = signal - hum, flat - hum
         window = settle(u, flat, candidate, band_known=band is not None) or window
     wider = None
     if band is not None and per_m is not None:
-        light = known.light and (known.light[0] * per_m, known.light[1] * per_m)
         wider = lit(u, flat, window, light)
     solution = solve(u, signal, window, known, per_m, wider)
     return _result(scan, known, u, signal, window, solution, false_alarm, notices, middle, span)

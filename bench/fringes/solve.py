@@ -46,7 +46,8 @@ def solve(
     if wider is not None:
         whole = _rounds(part, values, wider.fit, wider, known, per_m, prior)
         if known.light is not None or _explains_more(whole.fit, solution.fit):
-            solution, window = _wary(whole), wider
+            unweighted = _rounds(part, values, wider.fit, wider, known, per_m, prior, 1)
+            solution, window = _wary(whole, unweighted), wider
     error = slow_position_error(part, solution.fit)
     if error is None:
         return solution
@@ -66,18 +67,19 @@ def solve(
     return replace(solution, ruled=True)
 
 
-def _wary(whole: Solution) -> Solution:
+def _wary(whole: Solution, unweighted: Solution) -> Solution:
     """With what the residuals of a broad packet do not show in the uncertainty of its shift.
 
-    That is how far holding the many amplitudes may have moved it, and, where it is the positions
-    that scatter, a margin found by simulation: over a wide spectrum their errors are no longer
-    small beside a fringe.
+    That is how far weighing the readings and holding the many amplitudes may have moved it, and,
+    where it is the positions that scatter, a margin found by simulation: over a wide spectrum their
+    errors are no longer small beside a fringe.
     """
     cov = whole.covariance.copy()
     shares = whole.shares
     if shares.position * float(np.sqrt(np.mean(whole.fit.slope**2))) > shares.detector:
         cov[-2, :] *= SCATTERED
         cov[:, -2] *= SCATTERED
+    cov[-2, -2] += (whole.fit.shift - unweighted.fit.shift) ** 2
     if whole.unheld is not None:
         cov[-2, -2] += (whole.fit.shift - whole.unheld.fit.shift) ** 2
     return replace(whole, covariance=cov)
