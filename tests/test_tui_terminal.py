@@ -60,6 +60,19 @@ class Terminal:
                 return self.process.returncode
         raise AssertionError(f"the screen did not end: {self.seen[-2000:]!r}")
 
+    def press_until_ended(self, key: bytes) -> int:
+        """Press a key about once in two seconds until the process has ended; its exit status."""
+        end_s, press_s = time.monotonic() + DEADLINE_S, 0.0
+        while time.monotonic() < end_s:
+            if time.monotonic() >= press_s:
+                os.write(self.master, key)
+                press_s = time.monotonic() + 2.0
+            if select.select([self.master], [], [], 0.05)[0]:
+                self.seen += os.read(self.master, 65536)
+            elif self.process.poll() is not None:
+                return self.process.returncode
+        raise AssertionError(f"the screen did not end: {self.seen[-2000:]!r}")
+
     def calls(self) -> list[str]:
         return self.log.read_text().splitlines() if self.log.exists() else []
 
@@ -121,8 +134,8 @@ def test_the_stop_key_through_a_real_terminal(opened, key: bytes) -> None:
     terminal.read_until(b"SOFTWARE STOP")
     os.write(terminal.master, key)
     terminal.read_until(b"Reason: software stop pressed")
-    os.write(terminal.master, b"q")
-    assert terminal.drain() == 130
+    # On a busy machine a key hit in the very frame in which the run ends may be lost: press again.
+    assert terminal.press_until_ended(b"q") == 130
     assert terminal.calls() == ["stop software stop pressed", "close"]
     assert terminal.is_sane()
     assert b"left with 130" in terminal.seen

@@ -69,6 +69,7 @@ class EvenarmApp(App[int]):
         Binding("f8,ctrl+c", "software_stop", "software stop", priority=True),
         Binding("ctrl+q", "leave", "leave", priority=True),
         Binding("f4", "colours", "colours", priority=True),
+        Binding("q,Q", "leave_at_end", "leave", priority=True),
         Binding("q,Q", "leave", "leave"),
         Binding("enter", "begin", "start"),
         Binding("y,Y", "say(True)", "yes"),
@@ -294,6 +295,13 @@ class EvenarmApp(App[int]):
             self.exit(error.exit_status)
         else:
             self.refresh_scene()
+
+    def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
+        """Once the run has ended a letter cannot be part of a name, whatever has the focus still."""
+        return self.scene.phase == "done" if action == "leave_at_end" else True
+
+    def action_leave_at_end(self) -> None:
+        self.action_leave()
 
     def action_leave(self) -> None:
         """Leave at once where nothing runs; else ask, because leaving means stopping first."""
