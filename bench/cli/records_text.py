@@ -181,7 +181,7 @@ def _measured(item: MeasurementRecord) -> str:
     return text if degrees is None else f"{text}, {degrees:.3g} degrees of freedom"
 
 
-def _is_number(value: Any) -> bool:
+def _is_number(value: Any) -> TypeGuard[float]:
     return isinstance(value, int | float) and not isinstance(value, bool)
 
 

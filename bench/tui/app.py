@@ -297,7 +297,7 @@ class EvenarmApp(App[int]):
             self.refresh_scene()
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
-        """Once the run has ended a letter cannot be part of a name, whatever has the focus still."""
+        """Once the run has ended a letter is part of no name, whatever has the focus still."""
         return self.scene.phase == "done" if action == "leave_at_end" else True
 
     def action_leave_at_end(self) -> None:
