@@ -6,7 +6,7 @@ import math
 import textwrap
 import unicodedata
 from collections.abc import Iterable, Mapping, Sequence
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, TypeGuard
 
 from bench.errors import printable
 
