@@ -77,4 +77,5 @@ def test_a_scan_without_light_says_so(spec):
         readings = Readings(READINGS.time_s, X_M, signal, READINGS.saturated)
         body = findings(spec, white, readings, Located(found=False, reason="noise"), 6e-6)
         assert body.get("dark", False) is dark
+        assert findings(spec, white, readings, located(12.008e-3), 6e-6)["found"] is True
         assert ("is the lamp on" in body["reason"]) is dark

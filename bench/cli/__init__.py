@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import os
 import sys
-from pathlib import Path
 from typing import Annotated
 
 import typer
 
 from bench import __version__
 from bench.cli import check, drivers, fit, new, plan, records, run
+from bench.cli.options import BenchFile, Seed
 from bench.cli.output import EXIT_STOPPED, note, report_error
 from bench.errors import UsageError
 
@@ -45,12 +45,8 @@ def _show_version(wanted: bool) -> None:
 @app.callback(invoke_without_command=True)
 def start(
     context: typer.Context,
-    bench: Annotated[
-        Path | None, typer.Option("--bench", help="The bench description to use.")
-    ] = None,
-    seed: Annotated[
-        int | None, typer.Option("--seed", help="Seed of a simulated bench's hidden truth.")
-    ] = None,
+    bench: BenchFile = None,
+    seed: Seed = None,
     pace: Annotated[
         str | None,
         typer.Option(

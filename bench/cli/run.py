@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from bench.cli.options import BenchFile, Seed
 from bench.cli.output import (
     EXIT_DEVICE,
     EXIT_DONE,
@@ -35,9 +36,7 @@ EXIT_BY_OUTCOME = {
 
 def command(
     procedure: Annotated[str, typer.Argument(help="Name of a procedure, or a file.")],
-    bench: Annotated[
-        Path | None, typer.Option("--bench", help="The bench description to use.")
-    ] = None,
+    bench: BenchFile = None,
     unattended: Annotated[
         bool, typer.Option("--unattended", help="Ask nothing (simulated benches, or allowed ones).")
     ] = False,
@@ -48,9 +47,7 @@ def command(
     operator: Annotated[
         str | None, typer.Option("--operator", help="Your name for the record.")
     ] = None,
-    seed: Annotated[
-        int | None, typer.Option("--seed", help="Seed of a simulated bench's hidden truth.")
-    ] = None,
+    seed: Seed = None,
     pace: Annotated[
         str | None,
         typer.Option(

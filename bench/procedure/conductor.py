@@ -31,7 +31,7 @@ from .scanning import (
     sleep_in_slices,
     wait_for_rest,
 )
-from .state import Event, Pending, RunState, Setup, evolve
+from .state import Pending, RunState, Setup, evolve
 
 if TYPE_CHECKING:  # the class brings the database library, which the first screen need not wait for
     from bench.journal import Journal
@@ -342,8 +342,3 @@ class Conductor:
         self._board.located(located)
         found = findings(self._spec, source, self._readings, located, self.state.leg.speed_m_s)
         return said.LocateEnded(found, self._now())
-
-
-def event_of(kind: str, body: Mapping[str, Any], bench_time_s: float | None) -> Event:
-    """A journal entry as the event that it was, for folding."""
-    return Event(kind, {**body, "bench_time_s": bench_time_s})

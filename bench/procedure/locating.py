@@ -77,7 +77,8 @@ def findings(
         "notices": [{"code": n.code, "message": n.message} for n in located.notices],
     }
     unusable = _unusable(spec, readings, located)
-    if is_dark(spec, source, readings):
+    # Fringes that were found are light, however little of it was expected.
+    if not located.found and is_dark(spec, source, readings):
         unusable, body["dark"] = NO_LIGHT, True
     if unusable:
         body |= {"found": False, "reason": unusable}
